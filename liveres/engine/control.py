@@ -1,0 +1,266 @@
+"""The control side of an engine: what its filters are, and the commands that move them.
+
+``Control`` knows names, settings and lanes; it turns each wish into command rows and hands them to whoever runs the
+kernel. ``Processor`` runs it in the caller's thread; ``Live`` in the sound system's. Thread: control.
+"""
+
+from __future__ import annotations
+
+from collections import deque
+
+import numpy as np
+
+from liveres import limits
+from liveres.engine import reports
+from liveres.engine.memory import Memory
+from liveres.engine.settings import KINDS, WIDTHS, Filter, Notch, Preset, Resonator
+from liveres.errors import ParameterError, nearest
+from liveres.kernels import state as s
+from liveres.theory.poles import Section, decay_from_radius
+from liveres.theory.response import steady_peak
+from liveres.units import gain_from_db
+
+LEAVE = -1.0
+# a ramp of this length leaves the ramp that is under way
+
+
+class Control:
+    """Filters by name, their lanes, and the way to move them.
+
+    preset : Preset; taken to ``rate_hz`` with centres and decays kept
+    rate_hz : float [Hz], closed [8000, 192000]
+    channels : int, 1 to 32
+    Raises : ParameterError - rate or channels outside their range; a filter that cannot exist at the rate, or
+        on channels the engine has not got; trim asked for where the dry sound alone reaches the ceiling
+    """
+
+    def __init__(self, preset: Preset, rate_hz: float = 48_000, channels: int = 2):
+        if not isinstance(preset, Preset):
+            raise ParameterError(f"preset must be a Preset, got {preset!r}: load one with load_preset")
+        self.rate_hz = limits.RATE_HZ.check("rate_hz", rate_hz)
+        self.channels = limits.check_whole("channels", channels, limits.CHANNELS)
+        self.preset = preset.at_rate(self.rate_hz)
+        self.memory = Memory(self.preset, self.rate_hz, self.channels)
+        self._filters: dict[str, Filter] = {}
+        self._sections: dict[str, Section] = {}
+        self._lane_of: dict[str, int] = {}
+        self._free = _FreeLanes()
+        self._events: list[dict] = []
+        self._events_read = 0
+        self._sequence = 0
+        rows = []
+        for one in self.preset.filters:
+            rows += self._place(one, 0.0)
+        self._send(rows + self._bus_rows(0.0))
+
+    # --- what to do with commands: the host's business -------------------------------------------
+
+    def _send(self, rows: list[list[float]]) -> None:
+        """Have command rows carried out, in order and all before the same frame."""
+        raise NotImplementedError
+
+    # --- moving filters ----------------------------------------------------------------------------
+
+    def retune(self, name: str, *, ramp_s: float = limits.RETUNE_S, **changes: object) -> None:
+        """Move a filter to new settings over ``ramp_s``, evenly in log frequency and log decay.
+
+        changes : any of centre_hz; depth_db (notch) or gain_db (resonator); one width; enabled
+        ramp_s : float [s], closed [0, 600]; 0 jumps, its ringing carried across
+        Raises : ParameterError - no such filter or field; a value outside its range; an impossible width there
+        """
+        ramp = self._frames(ramp_s)
+        old = self._find(name)
+        fields = ("centre_hz", old.level_field, *WIDTHS, "enabled")
+        for key in changes:
+            if key not in fields:
+                raise ParameterError(f"field must be one a {old.kind} can move, got {key!r}: {nearest(key, fields)}")
+        new = old.changed(**changes)
+        section = new.section(self.rate_hz)
+        before = self._sections[name]
+        rows = []
+        lane = self._lane_of[name]
+        if section != before:
+            centre = ramp if section.omega != before.omega else LEAVE
+            width = ramp if section.decay_rate != before.decay_rate else LEAVE
+            rows.append(self._tune_row(s.TUNE, lane, section, centre, width))
+        if new.level(self.rate_hz) != old.level(self.rate_hz):
+            rows.append(self._row(s.SET_LEVEL, lane, new.level(self.rate_hz), ramp))
+        self._filters[name] = new
+        self._sections[name] = section
+        if isinstance(new, Resonator) or self.preset.trim:
+            rows += self._bus_rows(ramp)
+        self._send(rows)
+
+    def add(self, one: Filter, *, fade_s: float = limits.FADE_S) -> None:
+        """Put a filter in, faded in over ``fade_s``.
+
+        Raises : ParameterError - its name is taken; it cannot exist at this rate or on these channels; no room
+        """
+        if not isinstance(one, tuple(KINDS.values())):
+            raise ParameterError(f"filter must be a Notch or a Resonator, got {one!r}: make one of them")
+        if one.name in self._filters:
+            raise ParameterError(f"name must be unique among filters, got {one.name!r}, which is in use: choose another or remove it first")
+        if one.origin == "preset":
+            one = one.changed(origin="user")
+        fade = self._frames(fade_s)
+        self._send(self._place(one, fade) + self._bus_rows(fade))
+
+    def remove(self, name: str, *, fade_s: float = limits.FADE_S) -> None:
+        """Take a filter out, faded out over ``fade_s``.
+
+        Raises : ParameterError - no such filter
+        """
+        fade = self._frames(fade_s)
+        one = self._find(name)
+        lane = self._lane_of.pop(name)
+        del self._filters[name], self._sections[name]
+        self._free.give_back(lane, self._mask(one), self.frame + int(fade))
+        self._send([self._row(s.SET_LEVEL, lane, 0.0, fade), *self._bus_rows(fade)])
+
+    def reset(self) -> None:
+        """Clear the delay registers: what rings stops. Settings and ramps stay."""
+        self._send([self._row(s.RESET)])
+
+    # --- reading -----------------------------------------------------------------------------------
+
+    @property
+    def filters(self) -> tuple[Filter, ...]:
+        """The filters now in force, in order."""
+        return tuple(self._filters.values())
+
+    @property
+    def frame(self) -> int:
+        """Frames processed since the start."""
+        return int(self.memory.state["frame"][0])
+
+    @property
+    def latency_frames(self) -> int:
+        """Frames by which the output lags the input: 0, or the look-ahead."""
+        return int(self.memory.state["look_frames"][0])
+
+    @property
+    def bus_limit_db(self) -> float:
+        """Permitted level of the resonator bus [dBFS]: the ceiling, less 3 dB for each doubling of the longest decay over 1 s."""
+        longest_s = self.longest_decay_s
+        doublings = max(0.0, np.log2(longest_s / limits.BUS_FREE_DECAY_S)) if longest_s else 0.0
+        return self.preset.ceiling_db - limits.BUS_DB_PER_DOUBLING * float(doublings)
+
+    @property
+    def longest_decay_s(self) -> float:
+        """Longest decay [s] among enabled resonators; 0 when there is none."""
+        rates = [self._sections[one.name].decay_rate for one in self._filters.values() if one.kind == "resonator" and one.enabled]
+        return decay_from_radius(float(np.exp(-min(rates))), self.rate_hz) if rates else 0.0
+
+    def sos(self, channel: int = 0) -> np.ndarray:
+        """Static second-order sections of the notch chain on one channel, scipy order b0 b1 b2 1 a1 a2.
+
+        Returns : (n, 6) float64, C order, one row an enabled notch that works on the channel
+        Raises : ParameterError - channel outside 0 to channels - 1
+        """
+        limits.check_whole("channel", channel, limits.Bound(0, self.channels - 1, "", "channels are counted from 0"))
+        rows = []
+        for one in self._filters.values():
+            if isinstance(one, Notch) and one.enabled and (one.channels is None or channel in one.channels):
+                b0, b1, b2, a1, a2 = self._sections[one.name].notch(one.level(self.rate_hz))
+                rows.append([b0, b1, b2, 1.0, a1, a2])
+        return np.array(rows).reshape(-1, 6)
+
+    def meters(self) -> dict:
+        """Levels and safety activity; see ``reports.read_meters``."""
+        return reports.read_meters(self.memory, self.bus_limit_db)
+
+    def events(self) -> list[dict]:
+        """What happened since the start, oldest first: dicts with frame, kind, channel, centre_hz, depth_db and why."""
+        fresh, self._events_read = reports.read_events(self.memory, self._events_read)
+        self._events += fresh
+        return list(self._events)
+
+    # --- rows --------------------------------------------------------------------------------------
+
+    def _row(self, kind: int, *values: float) -> list[float]:
+        self._sequence += 1
+        row = [float(self._sequence), float(kind), *map(float, values)]
+        return row + [0.0] * (s.COMMAND_FIELDS - len(row))
+
+    def _tune_row(self, kind: int, lane: int, section: Section, centre: float, width: float, mask: int = 0) -> list[float]:
+        return self._row(kind, lane, section.omega, section.decay_rate, section.real, section.imag, section.peak, centre, width, mask)
+
+    def _place(self, one: Filter, fade: float) -> list[list[float]]:
+        if one.channels is not None and one.channels[-1] >= self.channels:
+            raise ParameterError(
+                f"filter {one.name!r}: channels must be below {self.channels} (the engine has {self.channels}, counted from 0), "
+                f"got {one.channels[-1]}: leave channels out or run more"
+            )
+        section = one.section(self.rate_hz)
+        mask = self._mask(one)
+        lane = self._free.take(one.kind, mask, self.frame)
+        self._filters[one.name], self._sections[one.name], self._lane_of[one.name] = one, section, lane
+        return [
+            self._tune_row(s.PLACE, lane, section, 0.0, 0.0, mask),
+            self._row(s.SET_LEVEL, lane, one.level(self.rate_hz), fade),
+        ]
+
+    def _bus_rows(self, ramp: float) -> list[list[float]]:
+        return [
+            self._row(s.GLIDE_TO, s.BUS, self._trim_gain(), ramp),
+            self._row(s.GLIDE_TO, s.BUS_LIMIT, gain_from_db(self.bus_limit_db), ramp),
+        ]
+
+    def _trim_gain(self) -> float:
+        # the resonator bus's share of the room under the ceiling that the dry sound leaves
+        if not self.preset.trim:
+            return 1.0
+        through = gain_from_db(self.preset.input_db)
+        room = gain_from_db(self.preset.ceiling_db) - through * gain_from_db(self.preset.dry_db)
+        if room <= 0.0:
+            raise ParameterError(
+                f"trim must have room under the ceiling: input_db {self.preset.input_db:g} plus dry_db {self.preset.dry_db:g} "
+                f"must be below ceiling_db {self.preset.ceiling_db:g}, got {self.preset.input_db + self.preset.dry_db:g}: lower dry_db"
+            )
+        largest = max(steady_peak(self.filters, self.rate_hz, channel, part="bus")[0] for channel in range(self.channels))
+        return min(1.0, room / (through * largest)) if largest else 1.0
+
+    def _find(self, name: str) -> Filter:
+        if name not in self._filters:
+            raise ParameterError(f"name must be that of a filter in force, got {name!r}: {nearest(str(name), self._filters)}")
+        return self._filters[name]
+
+    def _frames(self, ramp_s: float) -> float:
+        return float(round(limits.RAMP_S.check("ramp_s", ramp_s) * self.rate_hz))
+
+    def _mask(self, one: Filter) -> int:
+        chosen = range(self.channels) if one.channels is None else one.channels
+        return sum(1 << channel for channel in chosen)
+
+
+class _FreeLanes:
+    """Which lanes are free. A resonator's group serves one set of channels, so free lanes are kept by set."""
+
+    def __init__(self):
+        self._notches = list(range(s.NOTCH_GROUPS * s.LANES - 1, -1, -1))
+        self._resonators: dict[int, list[int]] = {}
+        self._next_group = s.NOTCH_GROUPS
+        self._fading: deque[tuple[int, int, int]] = deque()
+
+    def take(self, kind: str, mask: int, frame: int) -> int:
+        while self._fading and self._fading[0][0] < frame:
+            _, lane, its_mask = self._fading.popleft()
+            self._put(lane, its_mask)
+        free = self._notches if kind == "notch" else self._resonators.setdefault(mask, [])
+        if not free and kind == "resonator" and self._next_group < s.GROUPS:
+            first = self._next_group * s.LANES
+            free.extend(range(first + s.LANES - 1, first - 1, -1))
+            self._next_group += 1
+        if not free:
+            most = limits.NOTCHES_MAX if kind == "notch" else limits.RESONATORS_MAX
+            raise ParameterError(f"filters must hold at most {most} of kind {kind}, got one more: remove some first")
+        return free.pop()
+
+    def give_back(self, lane: int, mask: int, frame: int) -> None:
+        self._fading.append((frame, lane, mask))
+
+    def _put(self, lane: int, mask: int) -> None:
+        if lane < s.NOTCH_GROUPS * s.LANES:
+            self._notches.append(lane)
+        else:
+            self._resonators[mask].append(lane)

@@ -1,0 +1,115 @@
+"""The look-ahead limiter: the gain is already down when the peak comes out, and smooth all the way.
+
+    P[n]  true peak near frame n: the largest of the samples and their four-fold interpolation
+    T[n] = min(1, c / P[n])                                  the gain this place needs
+    M[n] = the least T of the last ``look_frames`` + 1       held until every sample near it has gone out
+    H[n] = min(M[n], H[n-1] release)                         comes back gently
+    G[n] = H smoothed by two running means, in all no longer than the latency less the interpolator's twelve taps
+
+Means of numbers none above T stay at or under T, so no peak passes. Gains are whole multiples of 2^-30, so running
+sums never drift and a gain of one is exactly one.
+
+Source: interpolator ITU-R BS.1770-5 annex 2; the scheme is the sliding minimum with a non-negative FIR smoother of
+unit gain. Thread: audio.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from liveres.kernels import state as s
+from liveres.kernels._jit import inner
+
+ONE = 1 << 30
+TAPS = 12
+# of each phase of the interpolator
+LEAST_FRAMES = TAPS + 4
+# shorter leaves the smoothers no room
+
+_PHASE_0 = (
+    0.001708984375, 0.010986328125, -0.0196533203125, 0.033203125, -0.0594482421875, 0.1373291015625,
+    0.97216796875, -0.102294921875, 0.047607421875, -0.026611328125, 0.014892578125, -0.00830078125,
+)  # fmt: skip
+_PHASE_1 = (
+    -0.0291748046875, 0.029296875, -0.0517578125, 0.089111328125, -0.16650390625, 0.465087890625,
+    0.77978515625, -0.2003173828125, 0.1015625, -0.0582275390625, 0.033081054688, -0.018920898438,
+)  # fmt: skip
+PHASES = np.array([_PHASE_0, _PHASE_1, _PHASE_1[::-1], _PHASE_0[::-1]])
+_PEAK_MARGIN = 10.0 ** (-0.05 / 20.0)
+# half of the 0.1 dB allowed, for a gain that moves within the interpolator's reach
+
+LOOK = np.dtype(
+    [
+        ("delayed", "f8"),  # ring of samples on their way out
+        ("needed", "f8"),  # queue of minima: gain ...
+        ("since", "i8"),  # ... and its frame
+        ("held", "i8"),  # ring of H for the first mean
+        ("mean", "i8"),  # ring of its sums for the second
+    ],
+    align=True,
+)
+
+
+@inner
+def hold_under(state, channels, c, look, v, frame):
+    """Take one sample in; return the one that comes out now and its gain."""
+    channel = channels[c]
+    size = state[0].look_frames + 1
+    here = frame % size
+    look[c, here].delayed = v
+    need = 1.0
+    peak = _true_peak(look, c, here, size)
+    if peak > state[0].ceiling:
+        need = state[0].ceiling * _PEAK_MARGIN / peak
+    least = _sliding_least(channels, c, look, need, frame, size)
+    held = min(least, channel.look_held * state[0].release)
+    channel.look_held = held
+    return look[c, (frame + 1) % size].delayed, _smooth(state, channels, c, look, int(held * ONE), frame)
+
+
+@inner
+def _true_peak(look, c, here, size):
+    sums = (0.0, 0.0, 0.0, 0.0)
+    peak = 0.0
+    place = here
+    for tap in range(TAPS):
+        v = look[c, place].delayed
+        if 4 <= tap <= 7:
+            peak = max(peak, abs(v))
+        sums = (
+            sums[0] + PHASES[0, tap] * v,
+            sums[1] + PHASES[1, tap] * v,
+            sums[2] + PHASES[2, tap] * v,
+            sums[3] + PHASES[3, tap] * v,
+        )
+        place = place - 1 if place > 0 else size - 1
+    return max(peak, abs(sums[0]), abs(sums[1]), abs(sums[2]), abs(sums[3]))
+
+
+@inner
+def _sliding_least(channels, c, look, need, frame, size):
+    # queue of rising gains, oldest first; whatever a newer, smaller one makes pointless is dropped
+    channel = channels[c]
+    head, tail = channel.look_head, channel.look_tail
+    while tail > head and look[c, (tail - 1) % size].needed >= need:
+        tail -= 1
+    look[c, tail % size].needed = need
+    look[c, tail % size].since = frame
+    tail += 1
+    while look[c, head % size].since <= frame - size:
+        head += 1
+    channel.look_head, channel.look_tail = head, tail
+    return look[c, head % size].needed
+
+
+@inner
+def _smooth(state, channels, c, look, held, frame):
+    channel = channels[c]
+    first, second = state[0].look_first, state[0].look_second
+    place = frame % first
+    channel.look_sum_first += held - look[c, place].held
+    look[c, place].held = held
+    place = frame % second
+    channel.look_sum_second += channel.look_sum_first - look[c, place].mean
+    look[c, place].mean = channel.look_sum_first
+    return channel.look_sum_second / (float(ONE) * first * second)

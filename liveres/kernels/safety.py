@@ -1,0 +1,174 @@
+"""The safety stage: whatever comes in, no sample goes out that is not finite or is beyond the ceiling.
+
+Order, per channel: trap over non-finite sums, limiter, sustained-tone guard, mute gate, hard bound. Channels are
+judged each for itself, so a howl in one monitor does not duck the others.
+
+Limiter, zero latency: gain falls at once to ceiling/|v| and recovers by a constant number of dB a second; with no
+more to do it is exactly 1 and samples pass untouched.
+
+Guard: a loudspeaker heats with the mean square, and a tone's peak is only 3 dB above it where speech and music keep
+10 dB and more. So the guard measures crest (peak over rms) in windows of 40 ms: eight in a row near the ceiling with
+the crest of a tone, or of one that clips, and the output steps down 12 dB, holds, and returns slowly.
+Source: crest of a sine sqrt(2), exact; thermal limits of drivers, common practice.
+"""
+
+from __future__ import annotations
+
+import math
+
+from liveres.kernels import lookahead
+from liveres.kernels import state as s
+from liveres.kernels._jit import inner
+from liveres.limits import GUARD_CREST_DB, GUARD_DROP_DB, GUARD_NEAR_DB, GUARD_WINDOWS, INPUT_MAX, STATE_MAX
+
+_GUARD_LEAST = 10.0 ** (-GUARD_DROP_DB / 20.0)
+_GUARD_NEAR = 10.0 ** (-GUARD_NEAR_DB / 20.0)
+_GUARD_CREST_SQUARE = 10.0 ** (GUARD_CREST_DB / 10.0)
+
+
+@inner
+def take_in(state, channels, c, x, position, signal, count):
+    """Copy one channel's input into signal[c], trapping what is no sound, and meter it before the input gain."""
+    channel = channels[c]
+    gain = state[0].input_gain
+    fall = state[0].meter_fall
+    peak, energy = channel.peak_in, channel.energy_in
+    recent_peak, recent_power = channel.recent_peak_in, channel.recent_power_in
+    for n in range(count):
+        v = float(x[position + n, c])
+        if not abs(v) <= INPUT_MAX:
+            channel.input_traps += 1
+            # NaN and infinity are no sound; a finite number beyond full scale by so much is held
+            v = 0.0 if not abs(v) < math.inf else math.copysign(INPUT_MAX, v)
+        a = abs(v)
+        peak = a if a > peak else peak
+        energy += v * v
+        recent_peak = max(a, recent_peak * fall)
+        recent_power = v * v + (recent_power - v * v) * fall
+        signal[c, n] = v * gain
+    channel.peak_in, channel.energy_in = peak, energy
+    channel.recent_peak_in, channel.recent_power_in = recent_peak, recent_power
+
+
+@inner
+def glide(glides, which):
+    """Move a slow gain on by one frame and return it; it lands on its target exactly."""
+    left = glides[which, s.LEFT]
+    if left > 0.0:
+        glides[which, s.LEFT] = left - 1.0
+        glides[which, s.NOW] = glides[which, s.END] if left == 1.0 else glides[which, s.NOW] + glides[which, s.STEP]
+    return glides[which, s.NOW]
+
+
+@inner
+def limited_gain(gain, level, ceiling, release):
+    """The limiter's next gain: back up by ``release``, at once down to what ``level`` needs, never above 1."""
+    gain *= release
+    if gain > 1.0:
+        gain = 1.0
+    if level * gain > ceiling:
+        gain = ceiling / level
+    return gain
+
+
+@inner
+def mix_bus(state, channels, c, bus, signal, gains, limits, count):
+    """signal = dry gain * signal + the resonator bus, which is held under its own permitted level."""
+    channel = channels[c]
+    gain, least = channel.bus_gain, channel.bus_gain_least
+    dry, release = state[0].dry_gain, state[0].release
+    for n in range(count):
+        v = bus[c, n] * gains[n]
+        gain = limited_gain(gain, abs(v), limits[n], release)
+        least = min(least, gain)
+        signal[c, n] = dry * signal[c, n] + v * gain
+    channel.bus_gain, channel.bus_gain_least = gain, least
+
+
+@inner
+def make_safe(state, channels, c, signal, gates, look, y, position, count, events):
+    """Bring one channel's signal under the ceiling and write it out."""
+    channel = channels[c]
+    ceiling, release = state[0].ceiling, state[0].release
+    for n in range(count):
+        v = signal[c, n]
+        if not abs(v) <= STATE_MAX:
+            if channel.trap_left == 0:
+                channel.state_traps += 1
+                log(state, events, state[0].frame + n, s.TRAP_EVENT, c, 0.0)
+                channel.trap_left = 2 * state[0].trap_frames
+            v = 0.0
+        if channel.trap_left > 0:
+            channel.trap_left -= 1
+            fading = channel.trap_left / state[0].trap_frames
+            v = 0.0 if fading >= 1.0 else v * (1.0 - fading)
+        if state[0].look_frames > 0:
+            v, gain = lookahead.hold_under(state, channels, c, look, v, state[0].frame + n)
+        else:
+            gain = limited_gain(channel.gain, abs(v), ceiling, release)
+            channel.gain = gain
+        v *= gain
+        if gain < 1.0:
+            channel.limited += 1
+            channel.gain_least = min(channel.gain_least, gain)
+        if state[0].guard_on:
+            v *= _guard(state, channels, c, v, n, events)
+        v *= gates[n]
+        v = min(max(v, -ceiling), ceiling)
+        y[position + n, c] = v
+        signal[c, n] = v
+
+
+@inner
+def meter_out(state, channels, c, signal, count):
+    """Meter what went out."""
+    channel = channels[c]
+    fall = state[0].meter_fall
+    peak, energy = channel.peak_out, channel.energy_out
+    recent_peak, recent_power = channel.recent_peak_out, channel.recent_power_out
+    for n in range(count):
+        v = signal[c, n]
+        a = abs(v)
+        peak = a if a > peak else peak
+        energy += v * v
+        recent_peak = max(a, recent_peak * fall)
+        recent_power = v * v + (recent_power - v * v) * fall
+    channel.peak_out, channel.energy_out = peak, energy
+    channel.recent_peak_out, channel.recent_power_out = recent_peak, recent_power
+
+
+@inner
+def _guard(state, channels, c, v, n, events):
+    channel = channels[c]
+    channel.guard_peak = max(channel.guard_peak, abs(v))
+    channel.guard_energy += v * v
+    frame = state[0].frame + n
+    if (frame + 1) % state[0].guard_window == 0:
+        peak, mean = channel.guard_peak, channel.guard_energy / state[0].guard_window
+        tone = peak >= state[0].ceiling * _GUARD_NEAR and peak * peak <= mean * _GUARD_CREST_SQUARE
+        channel.guard_count = channel.guard_count + 1 if tone else 0
+        channel.guard_peak = channel.guard_energy = 0.0
+        if channel.guard_count >= GUARD_WINDOWS:
+            if channel.guard_rest == 0:
+                log(state, events, frame, s.GUARD_EVENT, c, 0.0)
+            channel.guard_rest = state[0].guard_hold
+    gain = channel.guard_gain
+    if channel.guard_rest > 0:
+        channel.guard_rest -= 1
+        gain = max(gain * state[0].guard_down, _GUARD_LEAST)
+    else:
+        gain = min(gain * state[0].guard_up, 1.0)
+    channel.guard_gain = gain
+    channel.guard_gain_least = min(channel.guard_gain_least, gain)
+    return gain
+
+
+@inner
+def log(state, events, frame, kind, c, value):
+    """Write an event into the ring; the newest EVENTS of them can be read."""
+    place = state[0].event_count % s.EVENTS
+    events[place, s.EVENT_FRAME] = frame
+    events[place, s.EVENT_KIND] = kind
+    events[place, s.EVENT_CHANNEL] = c
+    events[place, s.EVENT_VALUE] = value
+    state[0].event_count += 1
