@@ -1,7 +1,7 @@
 """The control side of an engine: what its filters are, and the commands that move them.
 
 ``Control`` knows names, settings and lanes; it turns each wish into command rows and hands them to whoever runs the
-kernel. ``Processor`` runs it in the caller's thread; ``Live`` in the sound system's. Thread: control.
+kernel: ``Processor`` in the caller's thread, ``Live`` in the sound system's. Thread: control.
 """
 
 from __future__ import annotations
@@ -15,6 +15,7 @@ from liveres.engine import reports
 from liveres.engine.memory import Memory
 from liveres.engine.settings import KINDS, WIDTHS, Filter, Notch, Preset, Resonator
 from liveres.errors import ParameterError, nearest
+from liveres.kernels import block
 from liveres.kernels import state as s
 from liveres.theory.poles import Section, decay_from_radius
 from liveres.theory.response import steady_peak
@@ -41,6 +42,7 @@ class Control:
         self.channels = limits.check_whole("channels", channels, limits.CHANNELS)
         self.preset = preset.at_rate(self.rate_hz)
         self.memory = Memory(self.preset, self.rate_hz, self.channels)
+        self._arrays = self.memory.arrays
         self._filters: dict[str, Filter] = {}
         self._sections: dict[str, Section] = {}
         self._lane_of: dict[str, int] = {}
@@ -53,11 +55,11 @@ class Control:
             rows += self._place(one, 0.0)
         self._send(rows + self._bus_rows(0.0))
 
-    # --- what to do with commands: the host's business -------------------------------------------
+    # --- commands --------------------------------------------------------------------------------
 
     def _send(self, rows: list[list[float]]) -> None:
-        """Have command rows carried out, in order and all before the same frame."""
-        raise NotImplementedError
+        """Have command rows carried out, in order and all before the same frame: at once, as nothing else is running."""
+        block.carry_out(*self._arrays, np.array(rows), len(rows))
 
     # --- moving filters ----------------------------------------------------------------------------
 
@@ -120,6 +122,14 @@ class Control:
     def reset(self) -> None:
         """Clear the delay registers: what rings stops. Settings and ramps stay."""
         self._send([self._row(s.RESET)])
+
+    def mute(self, *, ramp_s: float = limits.MUTE_S) -> None:
+        """Fade the output to silence over ``ramp_s``."""
+        self._send([self._row(s.GLIDE_TO, s.GATE, 0.0, self._frames(ramp_s))])
+
+    def unmute(self, *, ramp_s: float = limits.UNMUTE_S) -> None:
+        """Fade the output in over ``ramp_s``."""
+        self._send([self._row(s.GLIDE_TO, s.GATE, 1.0, self._frames(ramp_s))])
 
     # --- reading -----------------------------------------------------------------------------------
 

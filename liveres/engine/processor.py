@@ -39,9 +39,3 @@ class Processor(Control):
         block.advance(*self._arrays, np.ascontiguousarray(x, np.float64), y)
         # the ceiling is a float32 number, so rounding to single precision cannot pass it
         return y.astype(x.dtype, copy=False)
-
-    def _send(self, rows: list[list[float]]) -> None:
-        if not hasattr(self, "_arrays"):
-            self._arrays = self.memory.arrays
-        if rows:
-            block.carry_out(*self._arrays, np.array(rows), len(rows))

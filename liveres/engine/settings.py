@@ -7,8 +7,9 @@ sample rate is checked where the rate is known: in ``Preset`` against its own, i
 from __future__ import annotations
 
 import dataclasses
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass, field
+from functools import partial
 
 from liveres import limits
 from liveres.errors import ParameterError, nearest
@@ -19,13 +20,7 @@ WIDTHS = ("pole_radius", "bandwidth_hz", "bandwidth_oct", "q", "decay_s")
 NORMALISATIONS = ("peak", "strike")
 ORIGINS = ("preset", "user", "watch")
 
-_WIDTH_BOUNDS = {
-    "pole_radius": limits.Bound(limits.RADIUS_MIN, 1.0, "", "it must stay below 1, where a pole rings for ever"),
-    "bandwidth_hz": limits.BANDWIDTH_HZ,
-    "bandwidth_oct": limits.BANDWIDTH_OCT,
-    "q": limits.Q,
-    "decay_s": limits.DECAY_S,
-}
+_RADIUS = limits.Bound(limits.RADIUS_MIN, 1.0, "", "it must stay below 1, where a pole rings for ever")
 
 
 @dataclass(frozen=True)
@@ -48,27 +43,14 @@ class _Filter:
     name: str
     centre_hz: float
 
-    def _check(self) -> None:
-        if not isinstance(self.name, str) or not self.name.strip():
-            raise ParameterError(f"name must be a word that is not empty, got {self.name!r}: give the filter a name")
-        self._set("centre_hz", limits.CENTRE_HZ.check("centre_hz", self.centre_hz))
-        given = [width for width in WIDTHS if getattr(self, width) is not None]
-        if len(given) != 1:
-            raise ParameterError(
-                f"width must be given exactly once, as one of {', '.join(WIDTHS)}, "
-                f"got {' and '.join(given) or 'none'}: {'keep one' if given else 'add one'}"
-            )
-        width = given[0]
-        value = _WIDTH_BOUNDS[width].check(width, getattr(self, width))
-        if width == "pole_radius" and not value < 1.0:
-            raise ParameterError(f"pole_radius must be below 1, where a pole rings for ever, got {value:.12g}: lower it or give decay_s")
-        self._set(width, value)
-        self._set("channels", check_channels(self.channels))
-        limits.check_flag("enabled", self.enabled)
-        _check_choice("origin", self.origin, ORIGINS)
+    def __post_init__(self) -> None:
+        self._check("name", "centre_hz")
+        width = check_one_width([width for width in WIDTHS if getattr(self, width) is not None])
+        self._check(width, "channels", "enabled", "origin", self.level_field, *self.extra_fields)
 
-    def _set(self, key: str, value: object) -> None:
-        object.__setattr__(self, key, value)
+    def _check(self, *keys: str) -> None:
+        for key in keys:
+            object.__setattr__(self, key, FILTER_CHECKS[key](key, getattr(self, key)))
 
     @property
     def width(self) -> tuple[str, float]:
@@ -136,10 +118,7 @@ class Notch(_Filter):
 
     kind = "notch"
     level_field = "depth_db"
-
-    def __post_init__(self) -> None:
-        self._check()
-        self._set("depth_db", limits.DEPTH_DB.check("depth_db", self.depth_db))
+    extra_fields = ()
 
     def level(self, rate_hz: float) -> float:
         """d, the share of the band-pass taken away: 0 when disabled, 1 for a null."""
@@ -169,11 +148,7 @@ class Resonator(_Filter):
 
     kind = "resonator"
     level_field = "gain_db"
-
-    def __post_init__(self) -> None:
-        self._check()
-        self._set("gain_db", limits.GAIN_DB.check("gain_db", self.gain_db))
-        _check_choice("normalise", self.normalise, NORMALISATIONS)
+    extra_fields = ("normalise",)
 
     def level(self, rate_hz: float) -> float:
         """g, the factor on the band-pass: 0 when disabled."""
@@ -219,13 +194,8 @@ class Preset:
     notes: str = ""
 
     def __post_init__(self) -> None:
-        for key, bound in PRESET_BOUNDS.items():
-            object.__setattr__(self, key, bound.check(key, getattr(self, key)))
-        for key in ("guard", "trim"):
-            limits.check_flag(key, getattr(self, key))
-        for key in ("title", "notes"):
-            if not isinstance(getattr(self, key), str):
-                raise ParameterError(f"{key} must be text, got {getattr(self, key)!r}: put it in quotes")
+        for key, check in PRESET_CHECKS.items():
+            object.__setattr__(self, key, check(key, getattr(self, key)))
         object.__setattr__(self, "filters", tuple(self.filters))
         check_filters(self.filters, self.rate_hz)
 
@@ -262,32 +232,107 @@ def check_channels(channels: object) -> tuple[int, ...] | None:
         raise ParameterError(f"channels must be a list of channel numbers counted from 0, got {channels!r}: write it like [0, 1]")
     numbers = [limits.check_whole("channels", one, limits.CHANNEL_INDEX) for one in channels]
     if not numbers or len(set(numbers)) != len(numbers):
-        raise ParameterError(f"channels must name each channel once and at least one, got {numbers}: leave it out for all channels")
+        raise ParameterError(
+            f"channels must name each channel once and at least one, got {numbers}: leave it out for all channels"
+        )
     return tuple(sorted(numbers))
 
 
+def check_one_width(given: list[str]) -> str:
+    """The one width among the names given; ParameterError for none or several."""
+    if len(given) != 1:
+        raise ParameterError(
+            f"width must be given exactly once, as one of {', '.join(WIDTHS)}, "
+            f"got {' and '.join(given) or 'none'}: {'keep one' if given else 'add one'}"
+        )
+    return given[0]
+
+
 def check_filters(filters: Iterable[Filter], rate_hz: float) -> None:
-    """ParameterError at the first filter of a wrong type, illegal at the rate, named twice, or too many."""
-    names: set[str] = set()
-    counts = {"notch": 0, "resonator": 0}
+    """ParameterError at the first filter of a wrong type, named twice, too many, or illegal at the rate."""
+    filters = tuple(filters)
     for one in filters:
         if not isinstance(one, (Notch, Resonator)):
             raise ParameterError(f"filters must hold Notch and Resonator, got {one!r}: wrap it in one of them")
-        if one.name in names:
-            raise ParameterError(f"name must be unique among filters, got {one.name!r} twice: rename one")
-        names.add(one.name)
-        counts[one.kind] += 1
+    for _, message in (*repeated_names(one.name for one in filters), *excess_kinds(one.kind for one in filters)):
+        raise ParameterError(message)
+    for one in filters:
         try:
             one.section(rate_hz)
         except ParameterError as error:
             raise ParameterError(f"filter {one.name!r}: {error}") from None
+
+
+def repeated_names(names: Iterable[object]) -> Iterator[tuple[int, str]]:
+    """Place, counted from 0, and message of every name that stood earlier too."""
+    seen = set()
+    for place, name in enumerate(names):
+        if name in seen:
+            yield place, f"name must be unique among filters, got {name!r} twice: rename one"
+        seen.add(name)
+
+
+def excess_kinds(kinds: Iterable[str]) -> Iterator[tuple[int, str]]:
+    """Place, counted from 0, of the first filter over the most its kind may have, and the message."""
+    places: dict[str, list[int]] = {"notch": [], "resonator": []}
+    for place, kind in enumerate(kinds):
+        places[kind].append(place)
     for kind, most in (("notch", limits.NOTCHES_MAX), ("resonator", limits.RESONATORS_MAX)):
-        if counts[kind] > most:
-            raise ParameterError(f"filters must hold at most {most} of kind {kind}, got {counts[kind]}: remove some")
+        if len(places[kind]) > most:
+            yield places[kind][most], f"filters must hold at most {most} of kind {kind}, got {len(places[kind])}: remove some"
 
 
-def _check_choice(name: str, value: object, choices: tuple[str, ...]) -> None:
+def _check_name(name: str, value: object) -> str:
+    if not isinstance(value, str) or not value.strip():
+        raise ParameterError(f"{name} must be a word that is not empty, got {value!r}: give the filter a name")
+    return value
+
+
+def _check_text(name: str, value: object) -> str:
+    if not isinstance(value, str):
+        raise ParameterError(f"{name} must be text, got {value!r}: put it in quotes")
+    return value
+
+
+def _check_radius(name: str, value: object) -> float:
+    radius = _RADIUS.check(name, value)
+    if not radius < 1.0:
+        raise ParameterError(f"{name} must be below 1, where a pole rings for ever, got {radius:.12g}: lower it or give decay_s")
+    return radius
+
+
+def _check_choice(choices: tuple[str, ...], name: str, value: object) -> str:
     if value not in choices:
         raise ParameterError(f"{name} must be one of {', '.join(choices)}, got {value!r}: {nearest(str(value), choices)}")
+    return value
+
+
+Check = Callable[[str, object], object]
+# of a field's name and the value given: the value to keep, or ParameterError
+
+FILTER_CHECKS: dict[str, Check] = {
+    "kind": partial(_check_choice, tuple(KINDS)),
+    "name": _check_name,
+    "centre_hz": limits.CENTRE_HZ.check,
+    "depth_db": limits.DEPTH_DB.check,
+    "gain_db": limits.GAIN_DB.check,
+    "pole_radius": _check_radius,
+    "bandwidth_hz": limits.BANDWIDTH_HZ.check,
+    "bandwidth_oct": limits.BANDWIDTH_OCT.check,
+    "q": limits.Q.check,
+    "decay_s": limits.DECAY_S.check,
+    "normalise": partial(_check_choice, NORMALISATIONS),
+    "channels": lambda _, value: check_channels(value),
+    "enabled": limits.check_flag,
+    "origin": partial(_check_choice, ORIGINS),
+}
+PRESET_CHECKS: dict[str, Check] = {
+    **{key: bound.check for key, bound in PRESET_BOUNDS.items()},
+    "guard": limits.check_flag,
+    "trim": limits.check_flag,
+    "title": _check_text,
+    "notes": _check_text,
+}
+# what one field may hold whatever the others do: made values, files and moves are all checked by these
 
 

@@ -102,6 +102,16 @@ def pointer(typingctx, address):
 
 
 @intrinsic
+def is_null(typingctx, place):
+    """Whether a pointer points nowhere."""
+
+    def codegen(context, builder, signature, args):
+        return builder.icmp_unsigned("==", builder.ptrtoint(args[0], ir.IntType(64)), ir.IntType(64)(0))
+
+    return types.boolean(types.voidptr), codegen
+
+
+@intrinsic
 def square_root(typingctx, value):
     """Square root of a float64 without the check for negative values that would keep loops from vectorising."""
 

@@ -9,9 +9,12 @@ A chord lies inside the circle through its ends, so no pole radius between is la
 can lose energy and never make any. Over an angle a the radius sags by a^2/12 on average; sweeping 200 to 4000 Hz
 in 10 ms that costs the ringing under 0.2 dB.
 
-Segments end on multiples of SEGMENT counted from frame 0, and where a ramp lands. Block boundaries do not matter.
+Segments end on multiples of their length counted from frame 0, and where a ramp lands. Block boundaries do not
+matter.
 
-The level follows 3 t^2 - 2 t^3, which starts and ends without a corner: a gain's corner is heard as a click.
+The level follows 3 t^2 - 2 t^3, which starts and ends without a corner: a gain's corner is heard as a click. Chords of
+a curve have corners too, at 16 frames some 82 dB under the sound they act on, so notches and moving levels, which act
+on the whole sound, go by segments of 4.
 """
 
 from __future__ import annotations
@@ -91,7 +94,8 @@ def begin_segment(groups, lanes, ringing, g, frame):
     if frame >= groups[g].landing and not _find_landing(groups, lanes, g, frame):
         end_motion(groups, lanes, ringing, g)
         return
-    length = min(SEGMENT - frame % SEGMENT, groups[g].landing - frame)
+    longest = s.SHORT_SEGMENT if g < s.NOTCH_GROUPS or groups[g].levels_move else SEGMENT
+    length = min(longest - frame % longest, groups[g].landing - frame)
     _walk(lanes, g, s.OMEGA, length)
     _walk(lanes, g, s.DECAY, length)
     share = 1.0 / length

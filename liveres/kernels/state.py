@@ -29,8 +29,8 @@ LANES = 32
 # four 512-bit or eight 256-bit vectors: enough independent work to hide the latency of the recursion
 CHUNK = 64
 # frames worked at a time; a chunk's scratch for two channels stays in the first-level cache
-SEGMENT = 16
-# frames between exact poles of a moving filter; see motion.py for what the chord between them costs
+SEGMENT, SHORT_SEGMENT = 16, 4
+# frames between exact values of a moving filter; see motion.py for what the chord between them costs
 
 NOTCH_GROUPS = NOTCHES_MAX // LANES
 SPARE_GROUPS = 64
