@@ -62,7 +62,9 @@ def hz_from_note(note: str, a4_hz: float = A4_HZ) -> float:
     """
     match = _NOTE.fullmatch(note.strip())
     if match is None:
-        raise ParameterError(f"note must be a letter A to G, an optional # or b, and an octave, got {note!r}: write it like C4, F#3 or Bb2-14c")
+        raise ParameterError(
+            f"note must be a letter A to G, an optional # or b, and an octave, got {note!r}: write it like C4, F#3 or Bb2-14c"
+        )
     letter, accidental, octave, cents = match.groups()
     step = _STEPS[letter.upper()] + {"#": 1, "b": -1, "": 0}[accidental]
     semitones = step + 12 * (int(octave) + 1) - 69

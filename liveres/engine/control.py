@@ -59,7 +59,7 @@ class Control:
 
     def _send(self, rows: list[list[float]]) -> None:
         """Have command rows carried out, in order and all before the same frame: at once, as nothing else is running."""
-        block.carry_out(*self._arrays, np.array(rows), len(rows))
+        block.carry_out(*self._arrays, np.array(rows).reshape(-1, s.COMMAND_FIELDS), len(rows))
 
     # --- moving filters ----------------------------------------------------------------------------
 
@@ -101,7 +101,9 @@ class Control:
         if not isinstance(one, tuple(KINDS.values())):
             raise ParameterError(f"filter must be a Notch or a Resonator, got {one!r}: make one of them")
         if one.name in self._filters:
-            raise ParameterError(f"name must be unique among filters, got {one.name!r}, which is in use: choose another or remove it first")
+            raise ParameterError(
+                f"name must be unique among filters, got {one.name!r}, which is in use: choose another or remove it first"
+            )
         if one.origin == "preset":
             one = one.changed(origin="user")
         fade = self._frames(fade_s)
@@ -150,7 +152,7 @@ class Control:
 
     @property
     def bus_limit_db(self) -> float:
-        """Permitted level of the resonator bus [dBFS]: the ceiling, less 3 dB for each doubling of the longest decay over 1 s."""
+        """Permitted level of the resonator bus [dBFS]: the ceiling, less 3 dB a doubling of the longest decay over 1 s."""
         longest_s = self.longest_decay_s
         doublings = max(0.0, np.log2(longest_s / limits.BUS_FREE_DECAY_S)) if longest_s else 0.0
         return self.preset.ceiling_db - limits.BUS_DB_PER_DOUBLING * float(doublings)
@@ -158,7 +160,8 @@ class Control:
     @property
     def longest_decay_s(self) -> float:
         """Longest decay [s] among enabled resonators; 0 when there is none."""
-        rates = [self._sections[one.name].decay_rate for one in self._filters.values() if one.kind == "resonator" and one.enabled]
+        sounding = [name for name, one in self._filters.items() if one.kind == "resonator" and one.enabled]
+        rates = [self._sections[name].decay_rate for name in sounding]
         return decay_from_radius(float(np.exp(-min(rates))), self.rate_hz) if rates else 0.0
 
     def sos(self, channel: int = 0) -> np.ndarray:
@@ -192,8 +195,8 @@ class Control:
         row = [float(self._sequence), float(kind), *map(float, values)]
         return row + [0.0] * (s.COMMAND_FIELDS - len(row))
 
-    def _tune_row(self, kind: int, lane: int, section: Section, centre: float, width: float, mask: int = 0) -> list[float]:
-        return self._row(kind, lane, section.omega, section.decay_rate, section.real, section.imag, section.peak, centre, width, mask)
+    def _tune_row(self, kind: int, lane: int, to: Section, centre: float, width: float, mask: int = 0) -> list[float]:
+        return self._row(kind, lane, to.omega, to.decay_rate, to.real, to.imag, to.peak, centre, width, mask)
 
     def _place(self, one: Filter, fade: float) -> list[list[float]]:
         if one.channels is not None and one.channels[-1] >= self.channels:

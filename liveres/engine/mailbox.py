@@ -51,7 +51,8 @@ class Mailbox:
                 break
             if time.monotonic() > deadline:
                 raise DeviceError(
-                    f"the audio thread must take its commands, {len(self._waiting)} are waiting: the device has stopped; open it again"
+                    f"the audio thread must take its commands, {len(self._waiting)} are waiting: "
+                    "the device has stopped; open it again"
                 )
             time.sleep(0.001)
         self._waiting += rows

@@ -32,7 +32,10 @@ class Processor(Control):
         """
         if not isinstance(x, np.ndarray) or x.ndim != 2 or x.shape[1] != self.channels:
             shape = x.shape if isinstance(x, np.ndarray) else type(x).__name__
-            raise ParameterError(f"x must be an array of shape (frames, {self.channels}), got {shape}: reshape it or make a Processor with other channels")
+            raise ParameterError(
+                f"x must be an array of shape (frames, {self.channels}), got {shape}: "
+                "reshape it or make a Processor with other channels"
+            )
         if x.dtype != np.float32 and x.dtype != np.float64:
             raise ParameterError(f"x must be float32 or float64 with full scale 1.0, got {x.dtype}: convert it first")
         y = np.empty(x.shape)

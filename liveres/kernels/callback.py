@@ -51,6 +51,7 @@ MAIL = np.dtype(
     ],
     align=True,
 )
+_TAKEN_AT = MAIL.fields["taken"][1]
 LOG_SEQUENCE, LOG_FRAME = 0, 1
 
 STATS = np.dtype(
@@ -165,7 +166,10 @@ def audio_callback(input_at, output_at, frames, time_info, flags, user):
     counts = carray(pointer(ports.mail_counts), (3,), np.int64)
     rows = carray(pointer(ports.mail_rows), (3, MAIL_ROWS, s.COMMAND_FIELDS), np.float64)
     log = carray(pointer(ports.mail_log), (LOG_ROWS, 2), np.float64)
-    take_mail(mail, ports.mail, ports.mail + 16, counts, rows, log, state, channels, groups, lanes, masks, ringing, history, glides)
+    take_mail(
+        mail, ports.mail, ports.mail + _TAKEN_AT, counts, rows, log,
+        state, channels, groups, lanes, masks, ringing, history, glides,
+    )  # fmt: skip
     position = 0
     while position < count:
         size = min(count - position, s.CHUNK)

@@ -17,7 +17,6 @@ from __future__ import annotations
 
 import numpy as np
 
-from liveres.kernels import state as s
 from liveres.kernels._jit import inner
 
 ONE = 1 << 30

@@ -39,15 +39,18 @@ def pole_at(omega, decay):
     """
     q = 0.25 * omega
     z = q * q
-    sin_q = q * fma(z, fma(z, fma(z, fma(z, fma(z, -1.0 / 39916800, 1.0 / 362880), -1.0 / 5040), 1.0 / 120), -1.0 / 6), 1.0)
-    cos_q = fma(z, fma(z, fma(z, fma(z, fma(z, fma(z, 1.0 / 479001600, -1.0 / 3628800), 1.0 / 40320), -1.0 / 720), 1.0 / 24), -0.5), 1.0)
+    sin_q = fma(z, fma(z, -1.0 / 39916800, 1.0 / 362880), -1.0 / 5040)
+    sin_q = q * fma(z, fma(z, fma(z, sin_q, 1.0 / 120), -1.0 / 6), 1.0)
+    cos_q = fma(z, fma(z, fma(z, 1.0 / 479001600, -1.0 / 3628800), 1.0 / 40320), -1.0 / 720)
+    cos_q = fma(z, fma(z, fma(z, cos_q, 1.0 / 24), -0.5), 1.0)
     sin_h = 2.0 * sin_q * cos_q
     cos_h = fma(-2.0 * sin_q, sin_q, 1.0)
     sine = 2.0 * sin_h * cos_h
     cosine = fma(-2.0 * sin_h, sin_h, 1.0)
     # e = expm1(-2 decay), by expm1(2 v) = expm1(v) (expm1(v) + 2): relative accuracy is kept for decays near none
     v = decay * (-1.0 / 16.0)
-    e = v * fma(v, fma(v, fma(v, fma(v, fma(v, fma(v, fma(v, 1.0 / 40320, 1.0 / 5040), 1.0 / 720), 1.0 / 120), 1.0 / 24), 1.0 / 6), 0.5), 1.0)
+    e = fma(v, fma(v, fma(v, 1.0 / 40320, 1.0 / 5040), 1.0 / 720), 1.0 / 120)
+    e = v * fma(v, fma(v, fma(v, fma(v, e, 1.0 / 24), 1.0 / 6), 0.5), 1.0)
     for _ in range(5):
         e = fma(e, e, 2.0 * e)
     one_plus = 2.0 + e
