@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from numbers import Real
 
 from liveres.errors import ParameterError
 
@@ -44,10 +45,13 @@ class Bound:
 
 
 def check_number(name: str, value: object) -> float:
-    """The value as a float; ParameterError for a boolean, a string or any other non-number."""
-    if isinstance(value, bool) or not hasattr(value, "__float__"):
+    """The value as a float; ParameterError for a boolean, a string or any other that is no real number."""
+    if isinstance(value, bool) or not isinstance(value, Real):
         raise ParameterError(f"{name} must be a number, got {value!r}: write it without quotes")
-    return float(value)
+    try:
+        return float(value)
+    except OverflowError:
+        raise ParameterError(f"{name} must be a number that a double can hold, got one of over 308 digits: write fewer") from None
 
 
 def check_whole(name: str, value: object, bound: Bound) -> int:

@@ -228,7 +228,8 @@ class Control:
         if room <= 0.0:
             raise ParameterError(
                 f"trim must have room under the ceiling: input_db {self.preset.input_db:g} plus dry_db {self.preset.dry_db:g} "
-                f"must be below ceiling_db {self.preset.ceiling_db:g}, got {self.preset.input_db + self.preset.dry_db:g}: lower dry_db"
+                f"must be below ceiling_db {self.preset.ceiling_db:g}, "
+                f"got {self.preset.input_db + self.preset.dry_db:g}: lower dry_db"
             )
         largest = max(steady_peak(self.filters, self.rate_hz, channel, part="bus")[0] for channel in range(self.channels))
         return min(1.0, room / (through * largest)) if largest else 1.0

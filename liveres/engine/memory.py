@@ -35,7 +35,8 @@ class Memory:
         self.ringing = np.zeros((s.GROUPS, channels, 2 * s.LANES))
         self.history = np.zeros((s.NOTCH_GROUPS, channels, 2 * s.LANES))
         self.glides = np.zeros((s.GLIDES, 4))
-        self.scratch = np.zeros((4, max(channels, s.GLIDES), s.CHUNK))
+        self.signal, self.feed, self.bus = np.zeros((3, channels, s.CHUNK))
+        self.slow = np.zeros((s.GLIDES, s.CHUNK))
         self.sums = np.zeros((channels, s.CHUNK * s.LANES))
         self.events = np.zeros((s.EVENTS, s.EVENT_FIELDS))
         self._write_settings(preset, rate_hz)
@@ -48,8 +49,8 @@ class Memory:
     def arrays(self) -> tuple[np.ndarray, ...]:
         """In the order in which the kernels take them."""
         return (
-            self.state, self.channels, self.groups, self.lanes, self.masks, self.ringing,
-            self.history, self.glides, self.scratch, self.sums, self.look, self.events,
+            self.state, self.channels, self.groups, self.lanes, self.masks, self.ringing, self.history, self.glides,
+            self.signal, self.feed, self.bus, self.slow, self.sums, self.look, self.marks, self.events,
         )  # fmt: skip
 
     def _write_settings(self, preset: Preset, rate_hz: float) -> None:
@@ -73,10 +74,11 @@ class Memory:
         reach = max(frames - lookahead.TAPS + 2, 2)
         first = (reach + 1) // 2
         second = max(reach + 1 - first, 1)
-        self.look = np.zeros((len(self.channels), frames + 1), lookahead.LOOK)
-        self.look["needed"] = 1.0
-        self.look["held"] = lookahead.ONE
-        self.look["mean"] = lookahead.ONE * first
+        self.look = np.zeros((len(self.channels), 2, frames + 1))
+        self.marks = np.zeros((len(self.channels), 3, frames + 1), np.int64)
+        self.look[:, lookahead.NEEDED] = 1.0
+        self.marks[:, lookahead.HELD] = lookahead.ONE
+        self.marks[:, lookahead.MEAN] = lookahead.ONE * first
         self.state["look_frames"], self.state["look_first"], self.state["look_second"] = frames, first, second
         self.channels["look_sum_first"] = lookahead.ONE * first
         self.channels["look_sum_second"] = lookahead.ONE * first * second

@@ -196,6 +196,8 @@ class Preset:
     def __post_init__(self) -> None:
         for key, check in PRESET_CHECKS.items():
             object.__setattr__(self, key, check(key, getattr(self, key)))
+        if isinstance(self.filters, (str, bytes)) or not isinstance(self.filters, Iterable):
+            raise ParameterError(f"filters must be a list of Notch and Resonator, got {self.filters!r}: write it like [Notch(...)]")
         object.__setattr__(self, "filters", tuple(self.filters))
         check_filters(self.filters, self.rate_hz)
 
@@ -207,12 +209,18 @@ class Preset:
         if rate_hz == self.rate_hz:
             return self
         limits.RATE_HZ.check("rate_hz", rate_hz)
-        moved = tuple(
-            one if one.pole_radius is None
-            else one.changed(decay_s=poles.decay_from_radius(one.pole_radius, self.rate_hz))
-            for one in self.filters
-        )
+        moved = tuple(one if one.pole_radius is None else _by_decay(one, self.rate_hz) for one in self.filters)
         return dataclasses.replace(self, filters=moved, rate_hz=rate_hz)
+
+
+def _by_decay(one: Filter, rate_hz: float) -> Filter:
+    """The same filter with its pole radius at this rate given as a decay."""
+    # a radius is rounded near one, so the longest permitted may read as a hair over 60 s
+    decay_s = min(poles.decay_from_radius(one.pole_radius, rate_hz), limits.DECAY_S.high)
+    try:
+        return one.changed(decay_s=decay_s)
+    except ParameterError as error:
+        raise ParameterError(f"filter {one.name!r}: {error}") from None
 
 
 PRESET_BOUNDS = {

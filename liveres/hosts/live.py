@@ -207,7 +207,7 @@ class Live(Control):
         for name, array in zip(c.PORT_NAMES, arrays, strict=True):
             ports[name] = array.ctypes.data
         ports["channel_count"] = self.channels
-        ports["look_size"] = self.memory.look.shape[1]
+        ports["look_size"] = self.memory.look.shape[2]
         return ports
 
     def _get_realtime(self) -> tuple[bool, str]:

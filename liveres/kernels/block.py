@@ -15,7 +15,6 @@ from numba import float64, from_dtype, int64, void
 from liveres.kernels import commands, motion, safety, section
 from liveres.kernels import state as s
 from liveres.kernels._jit import entry, flush_denormals, inner, restore_float_mode
-from liveres.kernels.lookahead import LOOK
 
 LANES, CHUNK = s.LANES, s.CHUNK
 
@@ -104,16 +103,18 @@ def _chunk_frames(state, channels, left):
 
 
 @inner
-def advance_block(state, channels, groups, lanes, masks, ringing, history, glides, scratch, sums, look, events, x, y):
+def advance_block(
+    state, channels, groups, lanes, masks, ringing, history, glides,
+    signal, feed, bus, slow, sums, look, marks, events, x, y,
+):  # fmt: skip
     """Process x (frames, channels) float64 into y of the same shape."""
-    signal, feed, bus, slow = scratch[0], scratch[1], scratch[2], scratch[3]
     position = 0
     while position < x.shape[0]:
         count = _chunk_frames(state, channels, x.shape[0] - position)
         for n in range(count):
-            slow[0, n] = safety.glide(glides, s.BUS)
-            slow[1, n] = safety.glide(glides, s.BUS_LIMIT)
-            slow[2, n] = safety.glide(glides, s.GATE)
+            slow[s.BUS, n] = safety.glide(glides, s.BUS)
+            slow[s.BUS_LIMIT, n] = safety.glide(glides, s.BUS_LIMIT)
+            slow[s.GATE, n] = safety.glide(glides, s.GATE)
         for c in range(channels.shape[0]):
             safety.take_in(state, channels, c, x, position, signal, count)
         _run_notches(state, groups, lanes, masks, ringing, history, signal, count)
@@ -125,11 +126,11 @@ def advance_block(state, channels, groups, lanes, masks, ringing, history, glide
         for c in range(channels.shape[0]):
             if sounded:
                 _gather(c, sums, bus, count)
-                safety.mix_bus(state, channels, c, bus, signal, slow[0], slow[1], count)
+                safety.mix_bus(state, channels, c, bus, signal, slow, count)
             elif state[0].dry_gain != 1.0:
                 for n in range(count):
                     signal[c, n] *= state[0].dry_gain
-            safety.make_safe(state, channels, c, signal, slow[2], look, y, position, count, events)
+            safety.make_safe(state, channels, c, signal, slow, look, marks, y, position, count, events)
             safety.meter_out(state, channels, c, signal, count)
             if channels[c].trap_left >= state[0].trap_frames and channels[c].trap_left > 0:
                 commands.clear_channel(state, channels, ringing, history, c)
@@ -146,23 +147,36 @@ _ARRAYS = (
     float64[:, :, ::1],  # ringing
     float64[:, :, ::1],  # history
     float64[:, ::1],  # glides
-    float64[:, :, ::1],  # scratch
+    float64[:, ::1],  # signal
+    float64[:, ::1],  # feed
+    float64[:, ::1],  # bus
+    float64[:, ::1],  # slow
     float64[:, ::1],  # sums
-    from_dtype(LOOK)[:, ::1],
+    float64[:, :, ::1],  # look
+    int64[:, :, ::1],  # marks
     float64[:, ::1],  # events
 )
 
 
 @entry(void(*_ARRAYS, float64[:, ::1], float64[:, ::1]))
-def advance(state, channels, groups, lanes, masks, ringing, history, glides, scratch, sums, look, events, x, y):
+def advance(
+    state, channels, groups, lanes, masks, ringing, history, glides,
+    signal, feed, bus, slow, sums, look, marks, events, x, y,
+):  # fmt: skip
     """advance_block with denormals flushed, and the float mode put back after."""
     mode = flush_denormals()
-    advance_block(state, channels, groups, lanes, masks, ringing, history, glides, scratch, sums, look, events, x, y)
+    advance_block(
+        state, channels, groups, lanes, masks, ringing, history, glides,
+        signal, feed, bus, slow, sums, look, marks, events, x, y,
+    )  # fmt: skip
     restore_float_mode(mode)
 
 
 @entry(void(*_ARRAYS, float64[:, ::1], int64))
-def carry_out(state, channels, groups, lanes, masks, ringing, history, glides, scratch, sums, look, events, rows, count):
+def carry_out(
+    state, channels, groups, lanes, masks, ringing, history, glides,
+    signal, feed, bus, slow, sums, look, marks, events, rows, count,
+):  # fmt: skip
     """Carry out the first ``count`` commands of ``rows``, before the next frame."""
     for i in range(count):
-        commands.carry_out(state, channels, groups, lanes, masks, ringing, history, glides, rows[i])
+        commands.carry_out(state, channels, groups, lanes, masks, ringing, history, glides, rows, i)

@@ -34,7 +34,6 @@ from liveres.kernels._jit import (
     store_release,
     thread_id,
 )
-from liveres.kernels.lookahead import LOOK
 
 FRESH = 4
 # bit of the shared word that says its slot has not been taken yet; the two bits below it are the slot
@@ -70,7 +69,8 @@ STATS = np.dtype(
 )
 
 PORT_NAMES = (
-    "state", "channels", "groups", "lanes", "masks", "ringing", "history", "glides", "scratch", "sums", "look", "events",
+    "state", "channels", "groups", "lanes", "masks", "ringing", "history", "glides",
+    "signal", "feed", "bus", "slow", "sums", "look", "marks", "events",
     "mail", "mail_counts", "mail_rows", "mail_log", "stats", "x", "y",
 )  # fmt: skip
 PORTS = np.dtype([(name, "i8") for name in PORT_NAMES] + [("channel_count", "i8"), ("look_size", "i8")], align=True)
@@ -104,18 +104,21 @@ def _count(stats, flags):
 
 
 @inner
-def take_mail(mail, shared_at, taken_at, counts, rows, log, state, channels, groups, lanes, masks, ringing, history, glides):
+def take_mail(
+    mail, shared_at, taken_at, counts, rows, log, state, channels, groups, lanes, masks, ringing, history, glides
+):  # fmt: skip
     """Carry out what a fresh slot asks for, each command once; note at which frame."""
     if load_acquire(shared_at) & FRESH == 0:
         return
     slot = exchange(shared_at, mail[0].slot) & 3
     mail[0].slot = slot
     taken = mail[0].taken
-    for i in range(counts[slot]):
+    first = slot * MAIL_ROWS
+    for i in range(first, first + counts[slot]):
         # a slot repeats what the writer did not yet know to be taken
-        if rows[slot, i, s.SEQUENCE] > taken:
-            commands.carry_out(state, channels, groups, lanes, masks, ringing, history, glides, rows[slot, i])
-            taken = int(rows[slot, i, s.SEQUENCE])
+        if rows[i, s.SEQUENCE] > taken:
+            commands.carry_out(state, channels, groups, lanes, masks, ringing, history, glides, rows, i)
+            taken = int(rows[i, s.SEQUENCE])
     place = mail[0].log_count % LOG_ROWS
     log[place, LOG_SEQUENCE] = taken
     log[place, LOG_FRAME] = state[0].frame
@@ -158,13 +161,17 @@ def audio_callback(input_at, output_at, frames, time_info, flags, user):
     ringing = carray(pointer(ports.ringing), (s.GROUPS, channel_count, 2 * s.LANES), np.float64)
     history = carray(pointer(ports.history), (s.NOTCH_GROUPS, channel_count, 2 * s.LANES), np.float64)
     glides = carray(pointer(ports.glides), (s.GLIDES, 4), np.float64)
-    scratch = carray(pointer(ports.scratch), (4, max(channel_count, s.GLIDES), s.CHUNK), np.float64)
+    signal = carray(pointer(ports.signal), (channel_count, s.CHUNK), np.float64)
+    feed = carray(pointer(ports.feed), (channel_count, s.CHUNK), np.float64)
+    bus = carray(pointer(ports.bus), (channel_count, s.CHUNK), np.float64)
+    slow = carray(pointer(ports.slow), (s.GLIDES, s.CHUNK), np.float64)
     sums = carray(pointer(ports.sums), (channel_count, s.CHUNK * s.LANES), np.float64)
-    look = carray(pointer(ports.look), (channel_count, ports.look_size), LOOK)
+    look = carray(pointer(ports.look), (channel_count, 2, ports.look_size), np.float64)
+    marks = carray(pointer(ports.marks), (channel_count, 3, ports.look_size), np.int64)
     events = carray(pointer(ports.events), (s.EVENTS, s.EVENT_FIELDS), np.float64)
     mail = carray(pointer(ports.mail), (1,), MAIL)
     counts = carray(pointer(ports.mail_counts), (3,), np.int64)
-    rows = carray(pointer(ports.mail_rows), (3, MAIL_ROWS, s.COMMAND_FIELDS), np.float64)
+    rows = carray(pointer(ports.mail_rows), (3 * MAIL_ROWS, s.COMMAND_FIELDS), np.float64)
     log = carray(pointer(ports.mail_log), (LOG_ROWS, 2), np.float64)
     take_mail(
         mail, ports.mail, ports.mail + _TAKEN_AT, counts, rows, log,
@@ -176,7 +183,10 @@ def audio_callback(input_at, output_at, frames, time_info, flags, user):
         x = carray(pointer(ports.x), (size, channel_count), np.float64)
         y = carray(pointer(ports.y), (size, channel_count), np.float64)
         _read(input_at, position, size, channel_count, count, x)
-        block.advance(state, channels, groups, lanes, masks, ringing, history, glides, scratch, sums, look, events, x, y)
+        block.advance(
+            state, channels, groups, lanes, masks, ringing, history, glides,
+            signal, feed, bus, slow, sums, look, marks, events, x, y,
+        )  # fmt: skip
         for n in range(size):
             for c in range(channel_count):
                 output[position + n, c] = y[n, c]

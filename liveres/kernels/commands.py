@@ -10,27 +10,27 @@ LANES = s.LANES
 
 
 @inner
-def carry_out(state, channels, groups, lanes, masks, ringing, history, glides, row):
-    """Carry out one command, now: the next frame to be processed is the first it acts on."""
-    kind = int(row[s.KIND])
+def carry_out(state, channels, groups, lanes, masks, ringing, history, glides, rows, i):
+    """Carry out command ``i`` of ``rows``, now: the next frame to be processed is the first it acts on."""
+    kind = int(rows[i, s.KIND])
     if kind == s.GLIDE_TO:
-        _glide_to(glides, int(row[s.LANE]), row[s.TO_LEVEL], row[s.LEVEL_FRAMES])
+        _glide_to(glides, int(rows[i, s.LANE]), rows[i, s.TO_LEVEL], rows[i, s.LEVEL_FRAMES])
         return
     if kind == s.RESET:
         reset(state, channels, ringing, history)
         return
-    g, k = int(row[s.LANE]) // LANES, int(row[s.LANE]) % LANES
+    g, k = int(rows[i, s.LANE]) // LANES, int(rows[i, s.LANE]) % LANES
     if kind == s.PLACE:
-        _place(state, groups, lanes, masks, ringing, history, g, k, int(row[s.MASK]))
+        _place(state, groups, lanes, masks, ringing, history, g, k, int(rows[i, s.MASK]))
     if groups[g].moving == 0:
         motion.begin_motion(groups, lanes, ringing, g)
     else:
         motion.break_segment(groups, lanes, g)
     if kind == s.SET_LEVEL:
-        _set_level(lanes, ringing, history, g, k, row[s.TO_LEVEL], row[s.LEVEL_FRAMES], state[0].frame)
+        _set_level(lanes, ringing, history, g, k, rows[i, s.TO_LEVEL], rows[i, s.LEVEL_FRAMES], state[0].frame)
         groups[g].awake = 1
     else:
-        _tune(lanes, g, k, row, state[0].frame)
+        _tune(lanes, g, k, rows, i, state[0].frame)
 
 
 @inner
@@ -56,11 +56,11 @@ def clear_lane(ringing, history, g, k):
 
 
 @inner
-def _tune(lanes, g, k, row, frame):
-    real, imag, peak = row[s.TO_REAL], row[s.TO_IMAG], row[s.TO_PEAK]
+def _tune(lanes, g, k, rows, i, frame):
+    real, imag, peak = rows[i, s.TO_REAL], rows[i, s.TO_IMAG], rows[i, s.TO_PEAK]
     lanes[g, s.REAL_END + k], lanes[g, s.IMAG_END + k], lanes[g, s.PEAK_END + k] = real, imag, peak
-    _aim(lanes, g, k, s.OMEGA, s.CENTRE_LANDS, row[s.TO_OMEGA], row[s.CENTRE_FRAMES], frame)
-    _aim(lanes, g, k, s.DECAY, s.WIDTH_LANDS, row[s.TO_DECAY], row[s.WIDTH_FRAMES], frame)
+    _aim(lanes, g, k, s.OMEGA, s.CENTRE_LANDS, rows[i, s.TO_OMEGA], rows[i, s.CENTRE_FRAMES], frame)
+    _aim(lanes, g, k, s.DECAY, s.WIDTH_LANDS, rows[i, s.TO_DECAY], rows[i, s.WIDTH_FRAMES], frame)
     if lanes[g, s.CENTRE_LANDS + k] > frame or lanes[g, s.WIDTH_LANDS + k] > frame:
         real, imag, peak = motion.pole_at(lanes[g, s.OMEGA + k], lanes[g, s.DECAY + k])
     lanes[g, s.REAL + k], lanes[g, s.IMAG + k], lanes[g, s.PEAK + k] = real, imag, peak

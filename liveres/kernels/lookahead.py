@@ -37,33 +37,26 @@ PHASES = np.array([_PHASE_0, _PHASE_1, _PHASE_1[::-1], _PHASE_0[::-1]])
 _PEAK_MARGIN = 10.0 ** (-0.05 / 20.0)
 # half of the 0.1 dB allowed, for a gain that moves within the interpolator's reach
 
-LOOK = np.dtype(
-    [
-        ("delayed", "f8"),  # ring of samples on their way out
-        ("needed", "f8"),  # queue of minima: gain ...
-        ("since", "i8"),  # ... and its frame
-        ("held", "i8"),  # ring of H for the first mean
-        ("mean", "i8"),  # ring of its sums for the second
-    ],
-    align=True,
-)
+DELAYED, NEEDED = 0, 1
+# rows of ``look``: ring of samples on their way out; queue of minima
+SINCE, HELD, MEAN = 0, 1, 2
+# rows of ``marks``: frames of the queue's entries; ring of H for the first mean; ring of its sums for the second
 
 
 @inner
-def hold_under(state, channels, c, look, v, frame):
+def hold_under(state, channels, c, look, marks, v, frame):
     """Take one sample in; return the one that comes out now and its gain."""
-    channel = channels[c]
     size = state[0].look_frames + 1
     here = frame % size
-    look[c, here].delayed = v
+    look[c, DELAYED, here] = v
     need = 1.0
     peak = _true_peak(look, c, here, size)
     if peak > state[0].ceiling:
         need = state[0].ceiling * _PEAK_MARGIN / peak
-    least = _sliding_least(channels, c, look, need, frame, size)
-    held = min(least, channel.look_held * state[0].release)
-    channel.look_held = held
-    return look[c, (frame + 1) % size].delayed, _smooth(state, channels, c, look, int(held * ONE), frame)
+    least = _sliding_least(channels, c, look, marks, need, frame, size)
+    held = min(least, channels[c].look_held * state[0].release)
+    channels[c].look_held = held
+    return look[c, DELAYED, (frame + 1) % size], _smooth(state, channels, c, marks, int(held * ONE), frame)
 
 
 @inner
@@ -72,7 +65,7 @@ def _true_peak(look, c, here, size):
     peak = 0.0
     place = here
     for tap in range(TAPS):
-        v = look[c, place].delayed
+        v = look[c, DELAYED, place]
         if 4 <= tap <= 7:
             peak = max(peak, abs(v))
         sums = (
@@ -86,29 +79,27 @@ def _true_peak(look, c, here, size):
 
 
 @inner
-def _sliding_least(channels, c, look, need, frame, size):
+def _sliding_least(channels, c, look, marks, need, frame, size):
     # queue of rising gains, oldest first; whatever a newer, smaller one makes pointless is dropped
-    channel = channels[c]
-    head, tail = channel.look_head, channel.look_tail
-    while tail > head and look[c, (tail - 1) % size].needed >= need:
+    head, tail = channels[c].look_head, channels[c].look_tail
+    while tail > head and look[c, NEEDED, (tail - 1) % size] >= need:
         tail -= 1
-    look[c, tail % size].needed = need
-    look[c, tail % size].since = frame
+    look[c, NEEDED, tail % size] = need
+    marks[c, SINCE, tail % size] = frame
     tail += 1
-    while look[c, head % size].since <= frame - size:
+    while marks[c, SINCE, head % size] <= frame - size:
         head += 1
-    channel.look_head, channel.look_tail = head, tail
-    return look[c, head % size].needed
+    channels[c].look_head, channels[c].look_tail = head, tail
+    return look[c, NEEDED, head % size]
 
 
 @inner
-def _smooth(state, channels, c, look, held, frame):
-    channel = channels[c]
+def _smooth(state, channels, c, marks, held, frame):
     first, second = state[0].look_first, state[0].look_second
     place = frame % first
-    channel.look_sum_first += held - look[c, place].held
-    look[c, place].held = held
+    channels[c].look_sum_first += held - marks[c, HELD, place]
+    marks[c, HELD, place] = held
     place = frame % second
-    channel.look_sum_second += channel.look_sum_first - look[c, place].mean
-    look[c, place].mean = channel.look_sum_first
-    return channel.look_sum_second / (float(ONE) * first * second)
+    channels[c].look_sum_second += channels[c].look_sum_first - marks[c, MEAN, place]
+    marks[c, MEAN, place] = channels[c].look_sum_first
+    return channels[c].look_sum_second / (float(ONE) * first * second)

@@ -29,15 +29,14 @@ _GUARD_CREST_SQUARE = 10.0 ** (GUARD_CREST_DB / 10.0)
 @inner
 def take_in(state, channels, c, x, position, signal, count):
     """Copy one channel's input into signal[c], trapping what is no sound, and meter it before the input gain."""
-    channel = channels[c]
     gain = state[0].input_gain
     fall = state[0].meter_fall
-    peak, energy = channel.peak_in, channel.energy_in
-    recent_peak, recent_power = channel.recent_peak_in, channel.recent_power_in
+    peak, energy = channels[c].peak_in, channels[c].energy_in
+    recent_peak, recent_power = channels[c].recent_peak_in, channels[c].recent_power_in
     for n in range(count):
         v = float(x[position + n, c])
         if not abs(v) <= INPUT_MAX:
-            channel.input_traps += 1
+            channels[c].input_traps += 1
             # NaN and infinity are no sound; a finite number beyond full scale by so much is held
             v = 0.0 if not abs(v) < math.inf else math.copysign(INPUT_MAX, v)
         a = abs(v)
@@ -46,8 +45,8 @@ def take_in(state, channels, c, x, position, signal, count):
         recent_peak = max(a, recent_peak * fall)
         recent_power = v * v + (recent_power - v * v) * fall
         signal[c, n] = v * gain
-    channel.peak_in, channel.energy_in = peak, energy
-    channel.recent_peak_in, channel.recent_power_in = recent_peak, recent_power
+    channels[c].peak_in, channels[c].energy_in = peak, energy
+    channels[c].recent_peak_in, channels[c].recent_power_in = recent_peak, recent_power
 
 
 @inner
@@ -72,48 +71,46 @@ def limited_gain(gain, level, ceiling, release):
 
 
 @inner
-def mix_bus(state, channels, c, bus, signal, gains, limits, count):
+def mix_bus(state, channels, c, bus, signal, slow, count):
     """signal = dry gain * signal + the resonator bus, which is held under its own permitted level."""
-    channel = channels[c]
-    gain, least = channel.bus_gain, channel.bus_gain_least
+    gain, least = channels[c].bus_gain, channels[c].bus_gain_least
     dry, release = state[0].dry_gain, state[0].release
     for n in range(count):
-        v = bus[c, n] * gains[n]
-        gain = limited_gain(gain, abs(v), limits[n], release)
+        v = bus[c, n] * slow[s.BUS, n]
+        gain = limited_gain(gain, abs(v), slow[s.BUS_LIMIT, n], release)
         least = min(least, gain)
         signal[c, n] = dry * signal[c, n] + v * gain
-    channel.bus_gain, channel.bus_gain_least = gain, least
+    channels[c].bus_gain, channels[c].bus_gain_least = gain, least
 
 
 @inner
-def make_safe(state, channels, c, signal, gates, look, y, position, count, events):
+def make_safe(state, channels, c, signal, slow, look, marks, y, position, count, events):
     """Bring one channel's signal under the ceiling and write it out."""
-    channel = channels[c]
     ceiling, release = state[0].ceiling, state[0].release
     for n in range(count):
         v = signal[c, n]
         if not abs(v) <= STATE_MAX:
-            if channel.trap_left == 0:
-                channel.state_traps += 1
+            if channels[c].trap_left == 0:
+                channels[c].state_traps += 1
                 log(state, events, state[0].frame + n, s.TRAP_EVENT, c, 0.0)
-                channel.trap_left = 2 * state[0].trap_frames
+                channels[c].trap_left = 2 * state[0].trap_frames
             v = 0.0
-        if channel.trap_left > 0:
-            channel.trap_left -= 1
-            fading = channel.trap_left / state[0].trap_frames
+        if channels[c].trap_left > 0:
+            channels[c].trap_left -= 1
+            fading = channels[c].trap_left / state[0].trap_frames
             v = 0.0 if fading >= 1.0 else v * (1.0 - fading)
         if state[0].look_frames > 0:
-            v, gain = lookahead.hold_under(state, channels, c, look, v, state[0].frame + n)
+            v, gain = lookahead.hold_under(state, channels, c, look, marks, v, state[0].frame + n)
         else:
-            gain = limited_gain(channel.gain, abs(v), ceiling, release)
-            channel.gain = gain
+            gain = limited_gain(channels[c].gain, abs(v), ceiling, release)
+            channels[c].gain = gain
         v *= gain
         if gain < 1.0:
-            channel.limited += 1
-            channel.gain_least = min(channel.gain_least, gain)
+            channels[c].limited += 1
+            channels[c].gain_least = min(channels[c].gain_least, gain)
         if state[0].guard_on:
             v *= _guard(state, channels, c, v, n, events)
-        v *= gates[n]
+        v *= slow[s.GATE, n]
         v = min(max(v, -ceiling), ceiling)
         y[position + n, c] = v
         signal[c, n] = v
@@ -122,10 +119,9 @@ def make_safe(state, channels, c, signal, gates, look, y, position, count, event
 @inner
 def meter_out(state, channels, c, signal, count):
     """Meter what went out."""
-    channel = channels[c]
     fall = state[0].meter_fall
-    peak, energy = channel.peak_out, channel.energy_out
-    recent_peak, recent_power = channel.recent_peak_out, channel.recent_power_out
+    peak, energy = channels[c].peak_out, channels[c].energy_out
+    recent_peak, recent_power = channels[c].recent_peak_out, channels[c].recent_power_out
     for n in range(count):
         v = signal[c, n]
         a = abs(v)
@@ -133,33 +129,32 @@ def meter_out(state, channels, c, signal, count):
         energy += v * v
         recent_peak = max(a, recent_peak * fall)
         recent_power = v * v + (recent_power - v * v) * fall
-    channel.peak_out, channel.energy_out = peak, energy
-    channel.recent_peak_out, channel.recent_power_out = recent_peak, recent_power
+    channels[c].peak_out, channels[c].energy_out = peak, energy
+    channels[c].recent_peak_out, channels[c].recent_power_out = recent_peak, recent_power
 
 
 @inner
 def _guard(state, channels, c, v, n, events):
-    channel = channels[c]
-    channel.guard_peak = max(channel.guard_peak, abs(v))
-    channel.guard_energy += v * v
+    channels[c].guard_peak = max(channels[c].guard_peak, abs(v))
+    channels[c].guard_energy += v * v
     frame = state[0].frame + n
     if (frame + 1) % state[0].guard_window == 0:
-        peak, mean = channel.guard_peak, channel.guard_energy / state[0].guard_window
+        peak, mean = channels[c].guard_peak, channels[c].guard_energy / state[0].guard_window
         tone = peak >= state[0].ceiling * _GUARD_NEAR and peak * peak <= mean * _GUARD_CREST_SQUARE
-        channel.guard_count = channel.guard_count + 1 if tone else 0
-        channel.guard_peak = channel.guard_energy = 0.0
-        if channel.guard_count >= GUARD_WINDOWS:
-            if channel.guard_rest == 0:
+        channels[c].guard_count = channels[c].guard_count + 1 if tone else 0
+        channels[c].guard_peak = channels[c].guard_energy = 0.0
+        if channels[c].guard_count >= GUARD_WINDOWS:
+            if channels[c].guard_rest == 0:
                 log(state, events, frame, s.GUARD_EVENT, c, 0.0)
-            channel.guard_rest = state[0].guard_hold
-    gain = channel.guard_gain
-    if channel.guard_rest > 0:
-        channel.guard_rest -= 1
+            channels[c].guard_rest = state[0].guard_hold
+    gain = channels[c].guard_gain
+    if channels[c].guard_rest > 0:
+        channels[c].guard_rest -= 1
         gain = max(gain * state[0].guard_down, _GUARD_LEAST)
     else:
         gain = min(gain * state[0].guard_up, 1.0)
-    channel.guard_gain = gain
-    channel.guard_gain_least = min(channel.guard_gain_least, gain)
+    channels[c].guard_gain = gain
+    channels[c].guard_gain_least = min(channels[c].guard_gain_least, gain)
     return gain
 
 

@@ -10,9 +10,11 @@ Arrays, C order, made and owned by ``engine.memory`` (G groups, L = LANES, C cha
     ringing   (G, C, 2 L) float64     per channel w[n-1], then w[n-2] while still or q[n-1] while moving
     history   (NOTCH_GROUPS, C, 2 L) float64   per notch and channel x[n-1], then x[n-2]
     glides    (GLIDES, 4) float64    slow gains: NOW, STEP, END, LEFT
-    scratch   (4, max(C, GLIDES), F) float64   signal, its two-frame difference, resonator bus, slow gains
+    signal, feed, bus  (C, F) float64   scratch: the sound, its two-frame difference, the resonators' sum
+    slow      (GLIDES, F) float64    scratch: the slow gains
     sums      (C, F L) float64        resonators' lane sums
-    look      LOOK record arrays     look-ahead limiter, see lookahead.py
+    look      (C, 2, S) float64      look-ahead limiter of latency S - 1 frames, rows in lookahead.py
+    marks     (C, 3, S) int64        the same
     events    (EVENTS, EVENT_FIELDS) float64    ring of what happened
 
 Notch groups come first, in series order; resonator groups follow. Every lane of a resonator group works on the

@@ -294,12 +294,14 @@ def _bus_far_and_near(bank: _Bank, omega: np.ndarray) -> np.ndarray:
         piece = slice(start, start + _GROUP_POINTS)
         at = omega[piece]
         middle, half = 0.5 * (at[-1] + at[0]), 0.5 * (at[-1] - at[0])
+        if half == 0.0:
+            out[piece] = _bus(bank, at)
+            continue
         low, high = np.searchsorted(bank.omega, [middle - _NEAR * half, middle + _NEAR * half])
-        out[piece] = _bus(bank.part(slice(low, high)), at)
-        if half > 0.0:
-            place = middle + half * nodes
-            far = _bus(bank.part(slice(0, low)), place) + _bus(bank.part(slice(high, None)), place)
-            out[piece] += np.polynomial.chebyshev.chebvander((at - middle) / half, _NODES - 1) @ (fit @ far)
+        place = middle + half * nodes
+        far = _bus(bank.part(slice(0, low)), place) + _bus(bank.part(slice(high, None)), place)
+        smooth = np.polynomial.chebyshev.chebvander((at - middle) / half, _NODES - 1) @ (fit @ far)
+        out[piece] = _bus(bank.part(slice(low, high)), at) + smooth
     return out
 
 

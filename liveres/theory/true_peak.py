@@ -1,7 +1,8 @@
 """True peak of a stream of sound: the highest point of the curve through the samples, which a converter draws.
 
 Four-times oversampling by a 48-tap polyphase interpolator, as Recommendation ITU-R BS.1770-5, annex 2, prints it.
-It reads up to 0.7 dB low near half the sample rate, and less below. Its taps are used at every sample rate.
+It reads up to 0.7 dB low near half the sample rate, and less below; its curve does not go through the samples
+themselves, so that it may also read a little under the highest sample. Its taps are used at every sample rate.
 Thread: control.
 """
 

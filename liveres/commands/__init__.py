@@ -1,0 +1,1 @@
+"""The body of each command, one module a command; ``run(args)`` returns the exit code."""

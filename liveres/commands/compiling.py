@@ -1,0 +1,13 @@
+"""A word to whoever waits while the kernels compile, which happens once on a machine."""
+
+from __future__ import annotations
+
+import sys
+
+
+def announce_compiling() -> None:
+    """Say on standard error that compiling takes a while, if it is about to."""
+    from liveres.kernels._jit import cache_is_cold
+
+    if cache_is_cold():
+        print("liveres: compiling the engine, once; this takes some ten seconds, the next start is quick", file=sys.stderr)

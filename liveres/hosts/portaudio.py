@@ -1,0 +1,63 @@
+"""The way to the sound system: PortAudio, or a clear word on what is missing.
+
+Everything offline works without it, so it is imported here and nowhere else.
+Thread: control.
+"""
+
+from __future__ import annotations
+
+import sys
+from pathlib import Path
+from types import ModuleType
+
+from liveres.errors import DeviceError
+
+_OS_RELEASE = Path("/etc/os-release")
+_INSTALL = {
+    "debian": "sudo apt install libportaudio2",
+    "fedora": "sudo dnf install portaudio",
+    "arch": "sudo pacman -S portaudio",
+    "suse": "sudo zypper install libportaudio2",
+}
+_FAMILIES = {"ubuntu": "debian", "rhel": "fedora", "centos": "fedora", "opensuse": "suse"}
+_OFFLINE = "offline commands work without it (liveres render, response, check)"
+
+
+def import_sounddevice() -> ModuleType:
+    """The sounddevice module with PortAudio running.
+
+    Raises : DeviceError - the PortAudio library is not installed, or it cannot start; with the remedy
+    """
+    try:
+        import sounddevice
+    except OSError as error:
+        raise DeviceError(f"PortAudio must be installed for live sound, got {error}: {install_line()}; {_OFFLINE}") from None
+    except Exception as error:
+        # its PortAudioError cannot be named here: the module that holds it failed to load
+        if type(error).__name__ != "PortAudioError":
+            raise
+        raise DeviceError(
+            f"the sound system must start for live sound, got {error}: check that sound works in another program; {_OFFLINE}"
+        ) from None
+    return sounddevice
+
+
+def install_line() -> str:
+    """The command that installs PortAudio on this system, as far as the system says what it is."""
+    if sys.platform == "darwin":
+        return "run: brew install portaudio"
+    for name in _system_names():
+        name = name.split("-")[0]
+        if command := _INSTALL.get(_FAMILIES.get(name, name)):
+            return f"run: {command}"
+    return "install the PortAudio library with this system's package manager"
+
+
+def _system_names() -> list[str]:
+    """ID and ID_LIKE of os-release(5): this system first, then those it is like."""
+    try:
+        lines = _OS_RELEASE.read_text(encoding="utf-8").splitlines()
+    except OSError:
+        return []
+    found = dict(line.split("=", 1) for line in lines if "=" in line)
+    return [name for key in ("ID", "ID_LIKE") for name in found.get(key, "").strip("\"'").lower().split()]
