@@ -26,8 +26,8 @@ CAUTION = (
 def run(args: argparse.Namespace) -> int:
     """Run until --seconds are over, Ctrl-C, or the device goes.
 
-    Returns : 0
-    Raises : ParameterError, FileError - the preset is wrong; DeviceError - no device, or it went away
+    Returns : 0 done; 1 the device went away, which has been said
+    Raises : ParameterError, FileError - the preset is wrong; DeviceError - no device, or one that will not close
     """
     preset = load_preset(args.preset) if args.preset else Preset()
     import_sounddevice()
@@ -44,9 +44,12 @@ def run(args: argparse.Namespace) -> int:
         # the ordinary way to end it
         pass
     finally:
+        if live.lost is not None:
+            # before closing, which a dead sound system can hold up
+            print(f"liveres: {live.lost}", file=sys.stderr, flush=True)
         let_go = live.close()
     if live.lost is not None:
-        raise DeviceError(live.lost)
+        return 1
     if not let_go:
         raise DeviceError("the sound system must let go of the device, it did not within 2 s: restart the sound system")
     _close(args, live)

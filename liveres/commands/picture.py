@@ -83,7 +83,10 @@ def _draw_gain(axes: Axes, preset: Preset, filters: list[Filter], channel: int, 
 
 def _legend(axes: Axes) -> None:
     """In one row over the frame, where it hides nothing."""
-    axes.legend(loc="lower right", bbox_to_anchor=(1.0, 1.0), ncols=4, frameon=False, borderaxespad=0.2, fontsize=8.5)
+    axes.legend(
+        loc="lower right", bbox_to_anchor=(1.0, 1.0), ncols=4, frameon=False, fontsize=8.5,
+        borderaxespad=0.2, handletextpad=0.4, columnspacing=1.2,
+    )
 
 
 def _frequency_axis(axes: Axes, rate_hz: float) -> None:
@@ -175,7 +178,6 @@ def _marks(axes: Axes, filters: list[Filter], rate_hz: float, size: float = 6.0)
 
 def _draw_distance(axes: Axes, filters: list[Filter], rate_hz: float) -> None:
     """The circle unrolled: how far inside it each pole and zero of the upper half lies."""
-    axes.set_title("the circle unrolled", loc="left", fontsize=10)
     axes.set_ylabel("distance inside the circle, 1 − R")
     drawn = [(one, *response.poles_and_zeros(one, rate_hz)) for one in filters]
     distances = [1.0 - abs(poles[0]) for _, poles, _ in drawn]

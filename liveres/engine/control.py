@@ -6,14 +6,14 @@ kernel: ``Processor`` in the caller's thread, ``Live`` in the sound system's. Th
 
 from __future__ import annotations
 
-from collections import deque
+import heapq
 
 import numpy as np
 
 from liveres import limits
 from liveres.engine import reports
 from liveres.engine.memory import Memory
-from liveres.engine.settings import KINDS, WIDTHS, Filter, Notch, Preset, Resonator
+from liveres.engine.settings import KINDS, WIDTHS, WIDTHS_BY_CENTRE, Filter, Notch, Preset, Resonator
 from liveres.errors import ParameterError, nearest
 from liveres.kernels import block
 from liveres.kernels import state as s
@@ -70,7 +70,7 @@ class Control:
         ramp_s : float [s], closed [0, 600]; 0 jumps, its ringing carried across
         Raises : ParameterError - no such filter or field; a value outside its range; an impossible width there
         """
-        ramp = self._frames(ramp_s)
+        ramp = self._frames("ramp_s", ramp_s)
         old = self._find(name)
         fields = ("centre_hz", old.level_field, *WIDTHS, "enabled")
         for key in changes:
@@ -78,15 +78,17 @@ class Control:
                 raise ParameterError(f"field must be one a {old.kind} can move, got {key!r}: {nearest(key, fields)}")
         new = old.changed(**changes)
         section = new.section(self.rate_hz)
-        before = self._sections[name]
         rows = []
         lane = self._lane_of[name]
-        if section != before:
-            centre = ramp if section.omega != before.omega else LEAVE
-            width = ramp if section.decay_rate != before.decay_rate else LEAVE
+        # a field that is named takes this ramp even where it is headed there already; one that is not goes on as it was
+        centre = ramp if "centre_hz" in changes else LEAVE
+        follows = centre != LEAVE and new.width[0] in WIDTHS_BY_CENTRE
+        width = ramp if follows or not changes.keys().isdisjoint(WIDTHS) else LEAVE
+        if centre != LEAVE or width != LEAVE:
             rows.append(self._tune_row(s.TUNE, lane, section, centre, width))
-        if new.level(self.rate_hz) != old.level(self.rate_hz):
-            rows.append(self._row(s.SET_LEVEL, lane, new.level(self.rate_hz), ramp))
+        level = new.level(self.rate_hz)
+        if level != old.level(self.rate_hz) or not changes.keys().isdisjoint((old.level_field, "enabled")):
+            rows.append(self._row(s.SET_LEVEL, lane, level, ramp))
         self._filters[name] = new
         self._sections[name] = section
         if isinstance(new, Resonator) or self.preset.trim:
@@ -106,7 +108,7 @@ class Control:
             )
         if one.origin == "preset":
             one = one.changed(origin="user")
-        fade = self._frames(fade_s)
+        fade = self._frames("fade_s", fade_s)
         self._send(self._place(one, fade) + self._bus_rows(fade))
 
     def remove(self, name: str, *, fade_s: float = limits.FADE_S) -> None:
@@ -114,11 +116,11 @@ class Control:
 
         Raises : ParameterError - no such filter
         """
-        fade = self._frames(fade_s)
+        fade = self._frames("fade_s", fade_s)
         one = self._find(name)
         lane = self._lane_of.pop(name)
         del self._filters[name], self._sections[name]
-        self._free.give_back(lane, self._mask(one), self.frame + int(fade))
+        self._free.give_back(one.kind, lane, self._mask(one), self.frame + int(fade))
         self._send([self._row(s.SET_LEVEL, lane, 0.0, fade), *self._bus_rows(fade)])
 
     def reset(self) -> None:
@@ -127,11 +129,11 @@ class Control:
 
     def mute(self, *, ramp_s: float = limits.MUTE_S) -> None:
         """Fade the output to silence over ``ramp_s``."""
-        self._send([self._row(s.GLIDE_TO, s.GATE, 0.0, self._frames(ramp_s))])
+        self._send([self._row(s.GLIDE_TO, s.GATE, 0.0, self._frames("ramp_s", ramp_s))])
 
     def unmute(self, *, ramp_s: float = limits.UNMUTE_S) -> None:
         """Fade the output in over ``ramp_s``."""
-        self._send([self._row(s.GLIDE_TO, s.GATE, 1.0, self._frames(ramp_s))])
+        self._send([self._row(s.GLIDE_TO, s.GATE, 1.0, self._frames("ramp_s", ramp_s))])
 
     # --- reading -----------------------------------------------------------------------------------
 
@@ -239,8 +241,8 @@ class Control:
             raise ParameterError(f"name must be that of a filter in force, got {name!r}: {nearest(str(name), self._filters)}")
         return self._filters[name]
 
-    def _frames(self, ramp_s: float) -> float:
-        return float(round(limits.RAMP_S.check("ramp_s", ramp_s) * self.rate_hz))
+    def _frames(self, name: str, ramp_s: float) -> float:
+        return float(round(limits.RAMP_S.check(name, ramp_s) * self.rate_hz))
 
     def _mask(self, one: Filter) -> int:
         chosen = range(self.channels) if one.channels is None else one.channels
@@ -248,33 +250,50 @@ class Control:
 
 
 class _FreeLanes:
-    """Which lanes are free. A resonator's group serves one set of channels, so free lanes are kept by set."""
+    """Which lanes are free. A resonator's group serves one set of channels until all its lanes are free again."""
 
     def __init__(self):
         self._notches = list(range(s.NOTCH_GROUPS * s.LANES - 1, -1, -1))
+        self._groups = list(range(s.GROUPS - 1, s.NOTCH_GROUPS - 1, -1))
         self._resonators: dict[int, list[int]] = {}
-        self._next_group = s.NOTCH_GROUPS
-        self._fading: deque[tuple[int, int, int]] = deque()
+        self._free_in = [s.LANES] * s.GROUPS
+        self._in_force = {"notch": 0, "resonator": 0}
+        self._fading: list[tuple[int, int, int]] = []
 
     def take(self, kind: str, mask: int, frame: int) -> int:
+        most = limits.NOTCHES_MAX if kind == "notch" else limits.RESONATORS_MAX
+        if self._in_force[kind] == most:
+            raise ParameterError(f"filters must hold at most {most} of kind {kind}, got one more: remove some first")
         while self._fading and self._fading[0][0] < frame:
-            _, lane, its_mask = self._fading.popleft()
+            _, lane, its_mask = heapq.heappop(self._fading)
             self._put(lane, its_mask)
         free = self._notches if kind == "notch" else self._resonators.setdefault(mask, [])
-        if not free and kind == "resonator" and self._next_group < s.GROUPS:
-            first = self._next_group * s.LANES
+        if not free and kind == "resonator" and self._groups:
+            first = self._groups.pop() * s.LANES
             free.extend(range(first + s.LANES - 1, first - 1, -1))
-            self._next_group += 1
         if not free:
-            most = limits.NOTCHES_MAX if kind == "notch" else limits.RESONATORS_MAX
-            raise ParameterError(f"filters must hold at most {most} of kind {kind}, got one more: remove some first")
-        return free.pop()
+            sets = f", on at most {s.GROUPS - s.NOTCH_GROUPS} sets of channels" if kind == "resonator" else ""
+            raise ParameterError(
+                f"filters must fit beside those of kind {kind} that still fade out{sets}, got one more: "
+                "remove some and wait until they have faded"
+            )
+        lane = free.pop()
+        self._free_in[lane // s.LANES] -= 1
+        self._in_force[kind] += 1
+        return lane
 
-    def give_back(self, lane: int, mask: int, frame: int) -> None:
-        self._fading.append((frame, lane, mask))
+    def give_back(self, kind: str, lane: int, mask: int, frame: int) -> None:
+        self._in_force[kind] -= 1
+        heapq.heappush(self._fading, (frame, lane, mask))
 
     def _put(self, lane: int, mask: int) -> None:
-        if lane < s.NOTCH_GROUPS * s.LANES:
+        group = lane // s.LANES
+        self._free_in[group] += 1
+        if group < s.NOTCH_GROUPS:
             self._notches.append(lane)
-        else:
-            self._resonators[mask].append(lane)
+            return
+        free = self._resonators[mask]
+        free.append(lane)
+        if self._free_in[group] == s.LANES:
+            free[:] = [one for one in free if one // s.LANES != group]
+            self._groups.append(group)

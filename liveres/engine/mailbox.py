@@ -28,7 +28,7 @@ class Mailbox:
     def __init__(self):
         self.mail = np.zeros(1, c.MAIL)
         self.counts = np.zeros(3, np.int64)
-        self.rows = np.zeros((3, c.MAIL_ROWS, s.COMMAND_FIELDS))
+        self.rows = np.zeros((3 * c.MAIL_ROWS, s.COMMAND_FIELDS))
         self.log = np.zeros((c.LOG_ROWS, 2))
         self.mail["slot"] = 1
         self._slot = 2
@@ -56,7 +56,8 @@ class Mailbox:
                 )
             time.sleep(0.001)
         self._waiting += rows
-        self.rows[self._slot, : len(self._waiting)] = self._waiting
+        first = self._slot * c.MAIL_ROWS
+        self.rows[first : first + len(self._waiting)] = np.array(self._waiting).reshape(-1, s.COMMAND_FIELDS)
         self.counts[self._slot] = len(self._waiting)
         self._slot = c.publish(self._address, self._slot)
 

@@ -39,6 +39,7 @@ class Processor(Control):
         if x.dtype != np.float32 and x.dtype != np.float64:
             raise ParameterError(f"x must be float32 or float64 with full scale 1.0, got {x.dtype}: convert it first")
         y = np.empty(x.shape)
-        block.advance(*self._arrays, np.ascontiguousarray(x, np.float64), y)
+        # the kernel's signature asks for an array it could write to, though it does not write to this one
+        block.advance(*self._arrays, np.require(x, np.float64, ["C", "W", "E"]), y)
         # the ceiling is a float32 number, so rounding to single precision cannot pass it
         return y.astype(x.dtype, copy=False)

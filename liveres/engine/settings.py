@@ -17,6 +17,8 @@ from liveres.theory import poles
 from liveres.units import gain_from_db
 
 WIDTHS = ("pole_radius", "bandwidth_hz", "bandwidth_oct", "q", "decay_s")
+WIDTHS_BY_CENTRE = ("bandwidth_oct", "q")
+# widths that are more hertz at a higher centre
 NORMALISATIONS = ("peak", "strike")
 ORIGINS = ("preset", "user", "watch")
 
@@ -197,7 +199,7 @@ class Preset:
         for key, check in PRESET_CHECKS.items():
             object.__setattr__(self, key, check(key, getattr(self, key)))
         if isinstance(self.filters, (str, bytes)) or not isinstance(self.filters, Iterable):
-            raise ParameterError(f"filters must be a list of Notch and Resonator, got {self.filters!r}: write it like [Notch(...)]")
+            raise ParameterError(f"filters must be a list of filters, got {self.filters!r}: write it like [Notch(...)]")
         object.__setattr__(self, "filters", tuple(self.filters))
         check_filters(self.filters, self.rate_hz)
 

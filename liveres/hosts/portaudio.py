@@ -6,12 +6,15 @@ Thread: control.
 
 from __future__ import annotations
 
+import ctypes
 import sys
 from pathlib import Path
 from types import ModuleType
 
 from liveres.errors import DeviceError
 
+_CLIENT_NAME = ctypes.c_char_p(b"liveres")
+# PortAudio keeps the pointer, so the name lives as long as the module
 _OS_RELEASE = Path("/etc/os-release")
 _INSTALL = {
     "debian": "sudo apt install libportaudio2",
@@ -28,8 +31,12 @@ def import_sounddevice() -> ModuleType:
 
     Raises : DeviceError - the PortAudio library is not installed, or it cannot start; with the remedy
     """
+    first = "sounddevice" not in sys.modules
     try:
         import sounddevice
+
+        if first:
+            _name_jack_client(sounddevice)
     except OSError as error:
         raise DeviceError(f"PortAudio must be installed for live sound, got {error}: {install_line()}; {_OFFLINE}") from None
     except Exception as error:
@@ -40,6 +47,16 @@ def import_sounddevice() -> ModuleType:
             f"the sound system must start for live sound, got {error}: check that sound works in another program; {_OFFLINE}"
         ) from None
     return sounddevice
+
+
+def _name_jack_client(sounddevice: ModuleType) -> None:
+    """Have JACK show our ports under our name. PortAudio takes the name when it starts, so it is started again."""
+    set_name = getattr(ctypes.CDLL(sounddevice._libname), "PaJack_SetClientName", None)
+    if set_name is None:
+        return
+    sounddevice._terminate()
+    set_name(_CLIENT_NAME)
+    sounddevice._initialize()
 
 
 def install_line() -> str:

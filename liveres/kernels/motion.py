@@ -1,8 +1,9 @@
 """Moving filters: ramps of centre, width and level that land on their targets at the exact frame.
 
 A ramp multiplies the centre, and the decay rate -ln R, by a constant each frame, so both move evenly in their
-logarithms. Between two legal settings that path stays legal: the widest pair at a centre is one whose decay rate
-is atanh-like in sin(w0), and the set of (ln w0, ln decay) that rings is convex.
+logarithms. Between two legal settings that path is legal but for one thing: from wide at a low centre to very wide at a
+high one it passes pairs too wide for the centres between, whose poles would turn real. There the width is held at the
+widest a setting may have.
 
 The exact pole is worked out once a SEGMENT; inside it the pole walks the straight chord between the two ends.
 A chord lies inside the circle through its ends, so no pole radius between is larger than the larger end: motion
@@ -19,8 +20,11 @@ on the whole sound, go by segments of 4.
 
 from __future__ import annotations
 
+import math
+
 from liveres.kernels import state as s
 from liveres.kernels._jit import fma, inner, square_root
+from liveres.theory.poles import PAIR_MARGIN
 
 LANES, SEGMENT = s.LANES, s.SEGMENT
 _BITS = SEGMENT.bit_length()
@@ -28,6 +32,8 @@ _FAR = 1 << 60
 # frames; no ramp is as long
 _NOTHING = 1e-300
 # keeps an empty lane's 0/0 away; too small to change any other number
+_WIDEST = math.sqrt(1.0 - PAIR_MARGIN)
+# tanh(decay) of the widest permitted pair, as a share of sin(w0)
 
 
 @inner
@@ -53,6 +59,8 @@ def pole_at(omega, decay):
     e = v * fma(v, fma(v, fma(v, fma(v, e, 1.0 / 24), 1.0 / 6), 0.5), 1.0)
     for _ in range(5):
         e = fma(e, e, 2.0 * e)
+    widest = _WIDEST * sine
+    e = max(e, -2.0 * widest / (1.0 + widest))
     one_plus = 2.0 + e
     square = fma(one_plus * sine, one_plus * sine, -e * e)
     return 0.5 * one_plus * cosine, 0.5 * square_root(square + _NOTHING), -0.5 * e

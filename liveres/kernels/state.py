@@ -34,7 +34,8 @@ CHUNK = 64
 SEGMENT, SHORT_SEGMENT = 16, 4
 # frames between exact values of a moving filter; see motion.py for what the chord between them costs
 
-NOTCH_GROUPS = NOTCHES_MAX // LANES
+NOTCH_GROUPS = NOTCHES_MAX // LANES + 1
+# one to spare, so that a full chain can take a new notch while a removed one fades out
 SPARE_GROUPS = 64
 # resonators on different channel sets cannot share a group
 GROUPS = NOTCH_GROUPS + RESONATORS_MAX // LANES + SPARE_GROUPS

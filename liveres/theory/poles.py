@@ -21,7 +21,7 @@ from liveres.limits import DECAY_S, RADIUS_MIN
 
 LN_1000 = math.log(1000.0)
 # 60 dB in nepers
-_PAIR_MARGIN = 1e-4
+PAIR_MARGIN = 1e-4
 # how far, as a share of sin(w0)^2, the poles must be from turning real: closer, a moving pair loses its digits
 
 
@@ -116,8 +116,8 @@ def design_section(centre_hz: float, radius: float, rate_hz: float) -> Section:
     one_minus = -math.expm1(-2.0 * decay_rate)
     one_plus = 2.0 - one_minus
     square = (one_plus * math.sin(omega)) ** 2 - one_minus**2
-    if not square > _PAIR_MARGIN * (one_plus * math.sin(omega)) ** 2:
-        widest_hz = rate_hz / math.pi * math.atan(math.sqrt(1.0 - _PAIR_MARGIN) * math.sin(omega))
+    if not square > PAIR_MARGIN * (one_plus * math.sin(omega)) ** 2:
+        widest_hz = rate_hz / math.pi * math.atan(math.sqrt(1.0 - PAIR_MARGIN) * math.sin(omega))
         raise ParameterError(
             f"bandwidth must be below {widest_hz:.6g} Hz at centre_hz {centre_hz:.12g} and rate_hz {rate_hz:.12g} "
             f"(Q 0.5, where the poles stop being a pair), got {bandwidth_from_radius(radius, rate_hz):.6g} Hz: "

@@ -190,7 +190,9 @@ def test_a_section_needs_a_centre_below_its_share_of_the_rate(make):
     )
 
 
-@pytest.mark.parametrize("kind, value, width_hz", [("bandwidth_hz", 12e3, "12000"), ("q", 0.75, "12000"), ("bandwidth_oct", 2, "13500")])
+@pytest.mark.parametrize(
+    "kind, value, width_hz", [("bandwidth_hz", 12e3, "12000"), ("q", 0.75, "12000"), ("bandwidth_oct", 2, "13500")]
+)
 def test_a_width_of_a_quarter_of_the_rate_is_refused_in_the_users_own_terms(kind, value, width_hz):
     """There the pole radius is zero and nothing rings."""
     assert refusal(notch(centre_hz=9000.0, **{kind: value}).section, 48_000) == (
@@ -217,7 +219,7 @@ def test_a_preset_of_nothing_passes_sound_as_it_is():
     assert (one.guard, one.trim, one.rate_hz, one.watch, one.title, one.notes) == (True, False, 48_000, None, "", "")
 
 
-_LIST = f"filters must be a list of Notch and Resonator, got {notch()!r}: write it like [Notch(...)]"
+_LIST = f"filters must be a list of filters, got {notch()!r}: write it like [Notch(...)]"
 PRESET_FAULTS = [
     ({"input_db": 25}, "input_db must be from -120 to 24 dB, got 25: choose a gain in the range"),
     ({"input_db": -math.inf}, "input_db must be from -120 to 24 dB, got -inf: choose a gain in the range"),
@@ -232,7 +234,7 @@ PRESET_FAULTS = [
     ({"notes": None}, "notes must be text, got None: put it in quotes"),
     ({"filters": ["hum"]}, "filters must hold Notch and Resonator, got 'hum': wrap it in one of them"),
     ({"filters": notch()}, _LIST),
-    ({"filters": None}, "filters must be a list of Notch and Resonator, got None: write it like [Notch(...)]"),
+    ({"filters": None}, "filters must be a list of filters, got None: write it like [Notch(...)]"),
     ({"filters": [notch(), resonator(name="n")]}, "name must be unique among filters, got 'n' twice: rename one"),
 ]
 
