@@ -20,6 +20,7 @@ _HOMES = {
     "ParameterError": "liveres.errors",
     "FileError": "liveres.errors",
     "AudioFileError": "liveres.errors",
+    "WriteError": "liveres.errors",
     "DeviceError": "liveres.errors",
 }
 

@@ -20,7 +20,6 @@ from typing import NoReturn
 
 from liveres import __version__, limits
 from liveres.errors import AudioFileError, FileError, LiveresError, ParameterError, nearest
-from liveres.hosts import spans
 
 _ABOUT = """\
 A real-time resonator and notch host: find and cut feedback, tune and play banks of resonators,
@@ -139,7 +138,7 @@ def _fill_render(parser: _Parser) -> None:
     parser.add_argument("--preset", required=True, metavar="FILE", help="what to do to the sound")
     parser.add_argument("--moves", metavar="FILE", help="changes over time, applied on their exact frames")
     _add_number(parser, "--block", limits.BLOCK_FRAMES, 1024, "frames in one go; the result does not depend on it", whole=True)
-    _add_number(parser, "--tail", spans.TAIL_S, 0.0, "seconds to go on after the end, for what still rings")
+    _add_number(parser, "--tail", limits.TAIL_S, 0.0, "seconds to go on after the end, for what still rings")
     parser.add_argument("--report", metavar="FILE", help="write what happened as JSON")
     _add_json(parser)
     parser.add_argument("--quiet", action="store_true", help="say nothing but what went wrong")
@@ -170,7 +169,7 @@ def _fill_live(parser: _Parser) -> None:
     _add_number(parser, "--block", limits.BLOCK_FRAMES, 64, "frames in one go: fewer is less delay and more work", whole=True)
     _add_number(parser, "--rate", limits.RATE_HZ, 48_000, "sample rate of the device")
     _add_number(parser, "--channels", limits.CHANNELS, 2, "channels in and out", whole=True)
-    _add_number(parser, "--seconds", spans.RUN_S, None, "stop by itself after so long")
+    _add_number(parser, "--seconds", limits.RUN_S, None, "stop by itself after so long")
     parser.add_argument("--no-screen", action="store_true", help="lines of text in place of the screen")
     _add_json(parser)
 

@@ -4,6 +4,7 @@
     |-- ParameterError   (also ValueError)  a value breaks a rule
     |-- FileError        (also ValueError)  a preset or moves file is wrong: every fault at once
     |-- AudioFileError   (also OSError)     a sound file cannot be read or written
+    |-- WriteError       (also OSError)     a file cannot be written where it was asked for
     `-- DeviceError      (also OSError)     the sound system or a device failed
 
 A message reads: parameter, rule with the bound worked out, value received, remedy. Present tense,
@@ -27,6 +28,10 @@ class ParameterError(LiveresError, ValueError):
 
 class AudioFileError(LiveresError, OSError):
     """A sound file cannot be read or written as asked."""
+
+
+class WriteError(LiveresError, OSError):
+    """A file cannot be written where it was asked for; what stood there before is untouched."""
 
 
 class DeviceError(LiveresError, OSError):
@@ -61,6 +66,10 @@ class FileError(LiveresError, ValueError):
         super().__init__("\n".join(fault.text(self.path) for fault in self.faults))
 
 
+_LIST_MOST = 32
+# longer lists are not read
+
+
 def nearest(word: str, known: Iterable[str]) -> str:
     """Remedy for an unknown name: the nearest known one, or the list of them all.
 
@@ -73,4 +82,6 @@ def nearest(word: str, known: Iterable[str]) -> str:
     close = difflib.get_close_matches(word, names, n=1, cutoff=0.6)
     if close:
         return f"did you mean {close[0]}?"
+    if len(names) > _LIST_MOST:
+        return f"use one of the {len(names)} known, such as {', '.join(names[:3])}"
     return f"use one of {', '.join(names)}" if names else "none is known here"

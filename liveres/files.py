@@ -15,12 +15,7 @@ from collections.abc import Iterator
 from contextlib import contextmanager, suppress
 from pathlib import Path
 
-from liveres.errors import Fault, FileError, LiveresError
-
-
-class WriteError(LiveresError, OSError):
-    """A file cannot be written where it was asked for; what stood there before is untouched."""
-
+from liveres.errors import Fault, FileError, LiveresError, WriteError
 
 _REASONS = {
     errno.ENOSPC: "the disk is full: free some space and try again",

@@ -120,6 +120,15 @@ FADE_S = 0.01
 RETUNE_S = 0.02
 # default ramp of a retune: fast under a finger, smooth to an ear
 
+MOVE_FRAME = Bound(0, 2**53, "frames", "choose a frame of the sound, counted from 0")
+# whole numbers are exact in float64 up to here; six thousand years at 48 kHz
+
+TAIL_S = Bound(0, 600, "s", "60 s outlasts everything a preset can ring")
+# ten of the longest permitted decays
+
+RUN_S = Bound(0.1, 604_800, "s", "leave it out to run until stopped")
+# a week
+
 # --- safety -----------------------------------------------------------------------------------
 
 CEILING_DB = Bound(-60, 0, "dBFS", "0 dBFS is full scale and nothing fits above it")

@@ -165,9 +165,6 @@ def _take(
             good[key] = checks[key](key, value)
         except ParameterError as error:
             faults.append(((*place, key), str(error)))
-        except OverflowError:
-            message = f"{key} must be a number that a double can hold, got one of over 308 digits: write fewer"
-            faults.append(((*place, key), message))
     return good
 
 

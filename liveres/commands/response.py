@@ -36,6 +36,7 @@ def run(args: argparse.Namespace) -> int:
     if args.plot is not None and Path(args.plot).suffix.lower() not in PICTURES:
         raise ParameterError(f"--plot must end in {' or '.join(PICTURES)}, got {args.plot}: choose one of them")
     shown = [one for one in preset.filters if args.channel is None or _passes(one, args.channel)]
+    bank = [one for one in shown if one.kind == "resonator"]
     groups = _groups(preset) if args.channel is None else [(f"channel {args.channel}", args.channel)]
     bus_gain = _bus_gain(preset)
     result = {
@@ -46,7 +47,7 @@ def run(args: argparse.Namespace) -> int:
         "totals": [_total(preset, label, channel, bus_gain) for label, channel in groups],
         "longest_decay_s": response.longest_decay_s(shown, preset.rate_hz),
         "trim_db": db_from_gain(bus_gain),
-        "bus_limit_db": response.bus_limit_db(shown, preset.rate_hz, preset.ceiling_db),
+        "bus_limit_db": response.bus_limit_db(response.longest_decay_s(bank, preset.rate_hz), preset.ceiling_db),
         "ceiling_db": preset.ceiling_db,
     }
     if args.sos is not None:

@@ -18,7 +18,7 @@ from liveres.errors import ParameterError, nearest
 from liveres.kernels import block
 from liveres.kernels import state as s
 from liveres.theory.poles import Section, decay_from_radius
-from liveres.theory.response import steady_peak
+from liveres.theory.response import bus_limit_db, trim_gain
 from liveres.units import gain_from_db
 
 LEAVE = -1.0
@@ -155,9 +155,7 @@ class Control:
     @property
     def bus_limit_db(self) -> float:
         """Permitted level of the resonator bus [dBFS]: the ceiling, less 3 dB a doubling of the longest decay over 1 s."""
-        longest_s = self.longest_decay_s
-        doublings = max(0.0, np.log2(longest_s / limits.BUS_FREE_DECAY_S)) if longest_s else 0.0
-        return self.preset.ceiling_db - limits.BUS_DB_PER_DOUBLING * float(doublings)
+        return bus_limit_db(self.longest_decay_s, self.preset.ceiling_db)
 
     @property
     def longest_decay_s(self) -> float:
@@ -225,16 +223,15 @@ class Control:
         # the resonator bus's share of the room under the ceiling that the dry sound leaves
         if not self.preset.trim:
             return 1.0
-        through = gain_from_db(self.preset.input_db)
-        room = gain_from_db(self.preset.ceiling_db) - through * gain_from_db(self.preset.dry_db)
-        if room <= 0.0:
+        through, dry = gain_from_db(self.preset.input_db), gain_from_db(self.preset.dry_db)
+        ceiling = gain_from_db(self.preset.ceiling_db)
+        if through * dry >= ceiling:
             raise ParameterError(
                 f"trim must have room under the ceiling: input_db {self.preset.input_db:g} plus dry_db {self.preset.dry_db:g} "
                 f"must be below ceiling_db {self.preset.ceiling_db:g}, "
                 f"got {self.preset.input_db + self.preset.dry_db:g}: lower dry_db"
             )
-        largest = max(steady_peak(self.filters, self.rate_hz, channel, part="bus")[0] for channel in range(self.channels))
-        return min(1.0, room / (through * largest)) if largest else 1.0
+        return trim_gain(self.filters, self.rate_hz, self.channels, through, dry, ceiling)
 
     def _find(self, name: str) -> Filter:
         if name not in self._filters:

@@ -31,9 +31,6 @@ _ANY_FIELD = tuple(dict.fromkeys(itertools.chain(*MOVABLE.values())))
 
 COLUMNS = ("time_s", "frame", "filter", "field", "value", "ramp_s")
 
-FRAME = limits.Bound(0, 2**53, "frames", "choose a frame of the sound, counted from 0")
-# up to 2^53 every whole number is also an exact float64: 5,900 years at 48 kHz
-
 _NAMES_TO_LIST = 64
 # beyond it a list of names helps nobody, and a file of wrong names would take minutes to compare
 
@@ -63,7 +60,7 @@ class Move:
     def __post_init__(self) -> None:
         ramp_s = limits.RETUNE_S if self.ramp_s is None else self.ramp_s
         checked = {
-            "frame": limits.check_whole("frame", self.frame, FRAME),
+            "frame": limits.check_whole("frame", self.frame, limits.MOVE_FRAME),
             "filter": FILTER_CHECKS["name"]("filter", self.filter),
             "field": _check_field(self.field, _ANY_FIELD, "a filter"),
             "value": FILTER_CHECKS[self.field](self.field, self.value),
@@ -220,8 +217,8 @@ def _read_frame(name: str, cell: str, rate_hz: float) -> int:
     """The nearest frame to a time, or the frame itself, from the decimal digits as written."""
     number = _read_number(name, cell)
     if name == "frame":
-        return limits.check_whole(name, number, FRAME)
-    top_s = FRAME.high / rate_hz
+        return limits.check_whole(name, number, limits.MOVE_FRAME)
+    top_s = limits.MOVE_FRAME.high / rate_hz
     limits.Bound(0, top_s, "s", "choose a time in the sound, counted from its start").check(name, number)
     return round(Fraction(cell.strip()) * Fraction(rate_hz)) if number else 0
 

@@ -95,6 +95,9 @@ class Live(Control):
             self._stream.start()
         except (sd.PortAudioError, ValueError) as error:
             self._running = False
+            if self._stream is not None:
+                self._stream.close()
+                self._stream = None
             raise DeviceError(self._refusal(error)) from None
         self._realtime = self._get_realtime()
         threading.Thread(target=self._watch, name="liveres-watch", daemon=True).start()

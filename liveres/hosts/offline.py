@@ -26,7 +26,6 @@ from liveres.errors import AudioFileError
 from liveres.files import atomic_target
 from liveres.hosts.report import file_sha256, settings_sha256, versions
 from liveres.hosts.soundfiles import Sink, Source, plan_container
-from liveres.hosts.spans import TAIL_S
 from liveres.json_values import for_json
 from liveres.presets import load_preset
 from liveres.theory.true_peak import TruePeak
@@ -64,7 +63,7 @@ def render(
         folder of out_path refuses, the disk is full
     """
     block_frames = limits.check_whole("block_frames", block_frames, limits.BLOCK_FRAMES)
-    tail_s = TAIL_S.check("tail_s", tail_s)
+    tail_s = limits.TAIL_S.check("tail_s", tail_s)
     began = time.perf_counter()
     preset_path = None if isinstance(preset, Preset) else str(os.fspath(preset))
     moves_path = str(os.fspath(moves)) if isinstance(moves, (str, os.PathLike)) else None

@@ -221,13 +221,12 @@ def telling_frequencies(filters: Iterable[object], rate_hz: float, channel: int 
     return np.minimum(grid * (rate_hz / (2.0 * np.pi)), rate_hz / 2.0)
 
 
-def bus_limit_db(filters: Iterable[object], rate_hz: float, ceiling_db: float) -> float:
+def bus_limit_db(longest_decay_s: float, ceiling_db: float) -> float:
     """Permitted level of the resonator bus [dBFS]: the ceiling, less 3 dB for each doubling of the longest decay over 1 s.
 
     A struck resonator radiates energy in proportion to its decay: so long ringing radiates no more than short.
     """
-    decay_s = longest_decay_s((one for one in filters if one.kind == "resonator"), rate_hz)
-    return ceiling_db - BUS_DB_PER_DOUBLING * math.log2(max(decay_s / BUS_FREE_DECAY_S, 1.0))
+    return ceiling_db - BUS_DB_PER_DOUBLING * math.log2(max(longest_decay_s / BUS_FREE_DECAY_S, 1.0))
 
 
 def _bank(filters: Iterable[object], kind: str, rate_hz: float, channel: int) -> _Bank:

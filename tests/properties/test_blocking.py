@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import itertools
+
 import numpy as np
 from hypothesis import given, settings
 from hypothesis import strategies as st
@@ -105,7 +107,7 @@ def test_a_state_fault_is_cleared_at_the_same_frame_for_any_blocks(seed):
         out = [p.process(NOISE[:1000])]
         p.memory.ringing[...] = np.nan
         edges = sorted({1000, FRAMES, *(int(cut) for cut in blocks if cut > 1000)})
-        out += [p.process(NOISE[a:b]) for a, b in zip(edges, edges[1:], strict=False)]
+        out += [p.process(NOISE[a:b]) for a, b in itertools.pairwise(edges)]
         results.append(np.concatenate(out).tobytes())
         assert p.meters()["traps"]["state"] == 2
     assert results[0] == results[1]

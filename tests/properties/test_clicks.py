@@ -10,9 +10,9 @@ from collections.abc import Callable
 
 import numpy as np
 import pytest
+from tools import meters
 
 from liveres import Notch, Preset, Processor, Resonator
-from tools import meters
 
 RATE_HZ = 48_000
 TONE = np.sin(2 * np.pi * 300 * np.arange(RATE_HZ) / RATE_HZ)[:, None]

@@ -6,9 +6,9 @@ import numpy as np
 import pytest
 from hypothesis import given, settings, target
 from hypothesis import strategies as st
+from tools import meters
 
 from liveres import Notch, Preset, Processor, Resonator
-from tools import meters
 
 RATE_HZ = 48_000
 CEILING = 10 ** (-1 / 20)

@@ -9,9 +9,9 @@ from pathlib import Path
 import numpy as np
 import pytest
 import soundfile
+from tools import meters
 
 from liveres import Notch, Preset, Resonator, render, save_preset
-from tools import meters
 
 PROGRAM = str(Path(__file__).with_name("live_on_rig.py"))
 

@@ -8,9 +8,9 @@ import sys
 import time
 
 import numpy as np
+from tools import meters, rigs
 
 from liveres import Notch, Preset, Processor, Resonator, save_preset
-from tools import meters, rigs
 
 UNDER_STRESS = """
 import json, sys, threading, time
@@ -119,7 +119,8 @@ def test_a_rate_the_server_has_not_got_is_refused_in_one_line(jack_server):
 def test_devices_lists_the_server(jack_server):
     """What live takes as --device must be what devices shows."""
     ended = subprocess.run(
-        [sys.executable, "-m", "liveres", "devices", "--json"], env=jack_server.environment, capture_output=True, text=True, timeout=60
-    )
+        [sys.executable, "-m", "liveres", "devices", "--json"],
+        env=jack_server.environment, capture_output=True, text=True, timeout=60,
+    )  # fmt: skip
     assert ended.returncode == 0
     assert "system" in ended.stdout

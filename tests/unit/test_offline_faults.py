@@ -12,8 +12,7 @@ from unit.sounds import HALL, MOVES, STRAIGHT, left_behind, noise, raw, write
 import liveres
 from liveres.engine.moves import save_moves
 from liveres.engine.settings import Notch, Preset
-from liveres.errors import AudioFileError, FileError, ParameterError
-from liveres.files import WriteError
+from liveres.errors import AudioFileError, FileError, ParameterError, WriteError
 from liveres.presets import save_preset
 
 ENDINGS = ".wav, .rf64, .w64, .caf, .flac, .aif, .aiff, .aifc"
