@@ -43,6 +43,7 @@ class Memory:
         self._write_look(preset, rate_hz)
         for gain in ("bus_gain", "gain", "guard_gain", "gain_least", "bus_gain_least", "guard_gain_least", "look_held"):
             self.channels[gain] = 1.0
+        self.channels["guard_left"] = self.state["guard_window"]
         self.glides[:, [s.NOW, s.END]] = 1.0
 
     @property

@@ -14,6 +14,7 @@ import os
 import time
 from collections import deque
 from collections.abc import Callable, Iterable, Iterator
+from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass
 
 import numpy as np
@@ -133,13 +134,25 @@ class _Run:
         """Everything through the engine, then the tail, then what a look-ahead still holds."""
         self.true_peak = TruePeak(self.source.channels)
         skip = self.processor.latency_frames
-        for piece in self._input(skip):
-            heard = np.concatenate(list(self._processed(piece)))[skip:]
-            skip -= min(skip, len(piece))
-            if len(heard):
-                self.true_peak.feed(sink.write(heard))
-            if progress is not None:
-                progress(sink.frames, max(sink.frames, self.source.frames + self.tail_frames))
+        # one piece is measured and written while the next is processed: neither needs the interpreter
+        with ThreadPoolExecutor(1) as beside:
+            writing: Future[None] | None = None
+            for piece in self._input(skip):
+                heard = np.concatenate(list(self._processed(piece)))[skip:]
+                skip -= min(skip, len(piece))
+                if writing is not None:
+                    writing.result()
+                    if progress is not None:
+                        progress(sink.frames, max(sink.frames, self.source.frames + self.tail_frames))
+                writing = beside.submit(self._keep, heard, sink)
+            if writing is not None:
+                writing.result()
+        if progress is not None:
+            progress(sink.frames, sink.frames)
+
+    def _keep(self, heard: np.ndarray, sink: Sink) -> None:
+        if len(heard):
+            self.true_peak.feed(sink.write(heard))
 
     def _input(self, latency: int) -> Iterator[np.ndarray]:
         size = math.ceil(_PIECE_FRAMES / self.block_frames) * self.block_frames

@@ -36,16 +36,33 @@ def _stretch(groups, lanes, ringing, g, frame, position, count):
 
 
 @inner
+def _run_chain(groups, lanes, masks, ringing, history, g, c, signal, start, stop):
+    # one group's notches on one channel, in order; at rest two at a time
+    waiting = -1
+    for k in range(LANES):
+        at_work = lanes[g, s.LEVEL + k] != 0.0 or lanes[g, s.LEVEL + s.GROWTH + k] != 0.0
+        if not (at_work and masks[g, k] >> c & 1):
+            continue
+        if groups[g].moving:
+            section.advance_notch(groups, lanes, ringing, history, g, k, c, signal, start, stop)
+        elif waiting < 0:
+            waiting = k
+        else:
+            section.advance_two_still(lanes, ringing, history, g, waiting, k, c, signal, start, stop)
+            waiting = -1
+    if waiting >= 0:
+        section.advance_notch(groups, lanes, ringing, history, g, waiting, c, signal, start, stop)
+
+
+@inner
 def _run_notches(state, groups, lanes, masks, ringing, history, signal, count):
     for g in range(min(s.NOTCH_GROUPS, state[0].groups_used)):
         position = 0
         while position < count and (groups[g].moving or groups[g].awake):
             frames = _stretch(groups, lanes, ringing, g, state[0].frame, position, count)
-            for k in range(LANES):
-                if masks[g, k] != 0 and (lanes[g, s.LEVEL + k] != 0.0 or lanes[g, s.LEVEL + s.GROWTH + k] != 0.0):
-                    for c in range(ringing.shape[1]):
-                        if masks[g, k] >> c & 1:
-                            section.advance_notch(groups, lanes, ringing, history, g, k, c, signal, position, position + frames)
+            for c in range(ringing.shape[1]):
+                if groups[g].channels >> c & 1:
+                    _run_chain(groups, lanes, masks, ringing, history, g, c, signal, position, position + frames)
             _advance_group(groups, g, frames)
             position += frames
 
@@ -111,12 +128,13 @@ def advance_block(
     position = 0
     while position < x.shape[0]:
         count = _chunk_frames(state, channels, x.shape[0] - position)
+        fall = state[0].meter_fall ** count
         for n in range(count):
             slow[s.BUS, n] = safety.glide(glides, s.BUS)
             slow[s.BUS_LIMIT, n] = safety.glide(glides, s.BUS_LIMIT)
             slow[s.GATE, n] = safety.glide(glides, s.GATE)
         for c in range(channels.shape[0]):
-            safety.take_in(state, channels, c, x, position, signal, count)
+            safety.take_in(state, channels, c, x, position, signal, count, fall)
         _run_notches(state, groups, lanes, masks, ringing, history, signal, count)
         for c in range(channels.shape[0]):
             _make_feed(channels, c, signal, feed, count)
@@ -130,8 +148,7 @@ def advance_block(
             elif state[0].dry_gain != 1.0:
                 for n in range(count):
                     signal[c, n] *= state[0].dry_gain
-            safety.make_safe(state, channels, c, signal, slow, look, marks, y, position, count, events)
-            safety.meter_out(state, channels, c, signal, count)
+            safety.make_safe(state, channels, c, signal, slow, look, marks, y, position, count, events, fall)
             if channels[c].trap_left >= state[0].trap_frames and channels[c].trap_left > 0:
                 commands.clear_channel(state, channels, ringing, history, c)
         state[0].frame += count

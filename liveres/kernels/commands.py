@@ -38,7 +38,8 @@ def _place(state, groups, lanes, masks, ringing, history, g, k, mask):
     state[0].groups_used = max(state[0].groups_used, g + 1)
     for field in range(s.FIELDS):
         lanes[g, field * LANES + k] = 0.0
-    lanes[g, s.OMEGA_STEP + k] = lanes[g, s.DECAY_STEP + k] = 1.0
+    motion.set_pace(lanes, g, k, s.OMEGA, 1.0)
+    motion.set_pace(lanes, g, k, s.DECAY, 1.0)
     clear_lane(ringing, history, g, k)
     masks[g, k] = mask
     groups[g].channels |= mask
@@ -75,9 +76,10 @@ def _aim(lanes, g, k, row, lands, target, frames, frame):
         return
     lanes[g, lands + k] = frame + frames
     if frames == 0.0:
-        lanes[g, row + k], lanes[g, row + s.TO_STEP + k] = target, 1.0
+        lanes[g, row + k] = target
+        motion.set_pace(lanes, g, k, row, 1.0)
     else:
-        lanes[g, row + s.TO_STEP + k] = (target / lanes[g, row + k]) ** (1.0 / frames)
+        motion.set_pace(lanes, g, k, row, (target / lanes[g, row + k]) ** (1.0 / frames))
 
 
 @inner

@@ -27,7 +27,7 @@ from liveres.kernels._jit import fma, inner, square_root
 from liveres.theory.poles import PAIR_MARGIN
 
 LANES, SEGMENT = s.LANES, s.SEGMENT
-_BITS = SEGMENT.bit_length()
+_DOUBLINGS = SEGMENT.bit_length() - 1
 _FAR = 1 << 60
 # frames; no ramp is as long
 _NOTHING = 1e-300
@@ -60,7 +60,8 @@ def pole_at(omega, decay):
     for _ in range(5):
         e = fma(e, e, 2.0 * e)
     widest = _WIDEST * sine
-    e = max(e, -2.0 * widest / (1.0 + widest))
+    bound = -2.0 * widest / (1.0 + widest)
+    e = e if e > bound else bound
     one_plus = 2.0 + e
     square = fma(one_plus * sine, one_plus * sine, -e * e)
     return 0.5 * one_plus * cosine, 0.5 * square_root(square + _NOTHING), -0.5 * e
@@ -145,7 +146,8 @@ def _find_landing(groups, lanes, g, frame):
     for k in range(LANES):
         for row, lands in ((s.OMEGA, s.CENTRE_LANDS), (s.DECAY, s.WIDTH_LANDS)):
             if lanes[g, lands + k] <= frame:
-                lanes[g, row + k], lanes[g, row + s.TO_STEP + k] = lanes[g, row + s.TO_END + k], 1.0
+                lanes[g, row + k] = lanes[g, row + s.TO_END + k]
+                set_pace(lanes, g, k, row, 1.0)
             else:
                 landing = min(landing, int(lanes[g, lands + k]))
         if lanes[g, s.LEVEL_LANDS + k] <= frame:
@@ -160,14 +162,24 @@ def _find_landing(groups, lanes, g, frame):
 
 
 @inner
+def set_pace(lanes, g, k, row, step):
+    """Set the factor a frame of a ramp, and with it the factor a SEGMENT."""
+    stride = step
+    for _ in range(_DOUBLINGS):
+        stride *= stride
+    lanes[g, row + s.TO_STEP + k], lanes[g, row + s.TO_STRIDE + k] = step, stride
+
+
+@inner
 def _walk(lanes, g, row, frames):
-    # row *= step^frames, by squaring
-    for k in range(LANES):
-        now, power = lanes[g, row + k], lanes[g, row + s.TO_STEP + k]
-        for bit in range(_BITS):
-            now = now * power if frames >> bit & 1 else now
-            power *= power
-        lanes[g, row + k] = now
+    # row *= step^frames
+    if frames == SEGMENT:
+        for k in range(LANES):
+            lanes[g, row + k] *= lanes[g, row + s.TO_STRIDE + k]
+    else:
+        for _ in range(frames):
+            for k in range(LANES):
+                lanes[g, row + k] *= lanes[g, row + s.TO_STEP + k]
 
 
 @inner

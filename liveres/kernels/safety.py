@@ -27,14 +27,12 @@ _GUARD_CREST_SQUARE = 10.0 ** (GUARD_CREST_DB / 10.0)
 
 
 @inner
-def take_in(state, channels, c, x, position, signal, count):
+def take_in(state, channels, c, x, position, signal, count, fall):
     """Copy one channel's input into signal[c], trapping what is no sound, and meter it before the input gain."""
     gain = state[0].input_gain
-    fall = state[0].meter_fall
-    peak, energy = channels[c].peak_in, channels[c].energy_in
-    recent_peak, recent_power = channels[c].recent_peak_in, channels[c].recent_power_in
+    peak, energy = 0.0, channels[c].energy_in
     for n in range(count):
-        v = float(x[position + n, c])
+        v = x[position + n, c]
         if not abs(v) <= INPUT_MAX:
             channels[c].input_traps += 1
             # NaN and infinity are no sound; a finite number beyond full scale by so much is held
@@ -42,11 +40,12 @@ def take_in(state, channels, c, x, position, signal, count):
         a = abs(v)
         peak = a if a > peak else peak
         energy += v * v
-        recent_peak = max(a, recent_peak * fall)
-        recent_power = v * v + (recent_power - v * v) * fall
         signal[c, n] = v * gain
-    channels[c].peak_in, channels[c].energy_in = peak, energy
-    channels[c].recent_peak_in, channels[c].recent_power_in = recent_peak, recent_power
+    power = (energy - channels[c].energy_in) / count
+    channels[c].energy_in = energy
+    channels[c].peak_in = max(channels[c].peak_in, peak)
+    channels[c].recent_peak_in = max(peak, channels[c].recent_peak_in * fall)
+    channels[c].recent_power_in = power + (channels[c].recent_power_in - power) * fall
 
 
 @inner
@@ -84,9 +83,37 @@ def mix_bus(state, channels, c, bus, signal, slow, count):
 
 
 @inner
-def make_safe(state, channels, c, signal, slow, look, marks, y, position, count, events):
+def make_safe(state, channels, c, signal, slow, look, marks, y, position, count, events, fall):
     """Bring one channel's signal under the ceiling and write it out."""
-    ceiling, release = state[0].ceiling, state[0].release
+    _trap(state, channels, c, signal, count, events)
+    _limit(state, channels, c, signal, look, marks, count)
+    if state[0].guard_on:
+        _guard(state, channels, c, signal, count, events)
+    ceiling = state[0].ceiling
+    peak, energy = 0.0, channels[c].energy_out
+    for n in range(count):
+        v = signal[c, n] * slow[s.GATE, n]
+        v = v if v < ceiling else ceiling
+        v = v if v > -ceiling else -ceiling
+        y[position + n, c] = v
+        a = abs(v)
+        peak = a if a > peak else peak
+        energy += v * v
+    power = (energy - channels[c].energy_out) / count
+    channels[c].energy_out = energy
+    channels[c].peak_out = max(channels[c].peak_out, peak)
+    channels[c].recent_peak_out = max(peak, channels[c].recent_peak_out * fall)
+    channels[c].recent_power_out = power + (channels[c].recent_power_out - power) * fall
+
+
+@inner
+def _trap(state, channels, c, signal, count, events):
+    # from a sum that is no sound on: silence for trap_frames, while the filters are cleared, then a fade of the same
+    sound = channels[c].trap_left == 0
+    for n in range(count):
+        sound = sound and abs(signal[c, n]) <= STATE_MAX
+    if sound:
+        return
     for n in range(count):
         v = signal[c, n]
         if not abs(v) <= STATE_MAX:
@@ -99,63 +126,77 @@ def make_safe(state, channels, c, signal, slow, look, marks, y, position, count,
             channels[c].trap_left -= 1
             fading = channels[c].trap_left / state[0].trap_frames
             v = 0.0 if fading >= 1.0 else v * (1.0 - fading)
-        if state[0].look_frames > 0:
-            v, gain = lookahead.hold_under(state, channels, c, look, marks, v, state[0].frame + n)
-        else:
-            gain = limited_gain(channels[c].gain, abs(v), ceiling, release)
-            channels[c].gain = gain
-        v *= gain
-        if gain < 1.0:
-            channels[c].limited += 1
-            channels[c].gain_least = min(channels[c].gain_least, gain)
-        if state[0].guard_on:
-            v *= _guard(state, channels, c, v, n, events)
-        v *= slow[s.GATE, n]
-        v = min(max(v, -ceiling), ceiling)
-        y[position + n, c] = v
         signal[c, n] = v
 
 
 @inner
-def meter_out(state, channels, c, signal, count):
-    """Meter what went out."""
-    fall = state[0].meter_fall
-    peak, energy = channels[c].peak_out, channels[c].energy_out
-    recent_peak, recent_power = channels[c].recent_peak_out, channels[c].recent_power_out
+def _limit(state, channels, c, signal, look, marks, count):
+    ceiling, release, gain = state[0].ceiling, state[0].release, channels[c].gain
+    if state[0].look_frames == 0:
+        peak = 0.0
+        for n in range(count):
+            a = abs(signal[c, n])
+            peak = a if a > peak else peak
+        if gain == 1.0 and peak <= ceiling:
+            return
+    least, limited = 1.0, 0
     for n in range(count):
         v = signal[c, n]
-        a = abs(v)
-        peak = a if a > peak else peak
-        energy += v * v
-        recent_peak = max(a, recent_peak * fall)
-        recent_power = v * v + (recent_power - v * v) * fall
-    channels[c].peak_out, channels[c].energy_out = peak, energy
-    channels[c].recent_peak_out, channels[c].recent_power_out = recent_peak, recent_power
+        if state[0].look_frames > 0:
+            v, gain = lookahead.hold_under(state, channels, c, look, marks, v, state[0].frame + n)
+        else:
+            gain = limited_gain(gain, abs(v), ceiling, release)
+        signal[c, n] = v * gain
+        least = gain if gain < least else least
+        limited += gain < 1.0
+    channels[c].gain = gain
+    channels[c].gain_least = min(channels[c].gain_least, least)
+    channels[c].limited += limited
 
 
 @inner
-def _guard(state, channels, c, v, n, events):
-    channels[c].guard_peak = max(channels[c].guard_peak, abs(v))
-    channels[c].guard_energy += v * v
-    frame = state[0].frame + n
-    if (frame + 1) % state[0].guard_window == 0:
-        peak, mean = channels[c].guard_peak, channels[c].guard_energy / state[0].guard_window
-        tone = peak >= state[0].ceiling * _GUARD_NEAR and peak * peak <= mean * _GUARD_CREST_SQUARE
-        channels[c].guard_count = channels[c].guard_count + 1 if tone else 0
-        channels[c].guard_peak = channels[c].guard_energy = 0.0
-        if channels[c].guard_count >= GUARD_WINDOWS:
-            if channels[c].guard_rest == 0:
-                log(state, events, frame, s.GUARD_EVENT, c, 0.0)
-            channels[c].guard_rest = state[0].guard_hold
-    gain = channels[c].guard_gain
-    if channels[c].guard_rest > 0:
-        channels[c].guard_rest -= 1
-        gain = max(gain * state[0].guard_down, _GUARD_LEAST)
-    else:
-        gain = min(gain * state[0].guard_up, 1.0)
-    channels[c].guard_gain = gain
-    channels[c].guard_gain_least = min(channels[c].guard_gain_least, gain)
-    return gain
+def _guard(state, channels, c, signal, count, events):
+    position = 0
+    while position < count:
+        stop = min(count, position + channels[c].guard_left)
+        peak, energy = channels[c].guard_peak, channels[c].guard_energy
+        for n in range(position, stop):
+            v = signal[c, n]
+            a = abs(v)
+            peak = a if a > peak else peak
+            energy += v * v
+        channels[c].guard_peak, channels[c].guard_energy = peak, energy
+        if channels[c].guard_rest > 0 or channels[c].guard_gain < 1.0:
+            _step_down(state, channels, c, signal, position, stop)
+        channels[c].guard_left -= stop - position
+        position = stop
+        if channels[c].guard_left == 0:
+            _judge_window(state, channels, c, state[0].frame + position - 1, events)
+
+
+@inner
+def _step_down(state, channels, c, signal, start, stop):
+    for n in range(start, stop):
+        if channels[c].guard_rest > 0:
+            channels[c].guard_rest -= 1
+            channels[c].guard_gain = max(channels[c].guard_gain * state[0].guard_down, _GUARD_LEAST)
+        else:
+            channels[c].guard_gain = min(channels[c].guard_gain * state[0].guard_up, 1.0)
+        channels[c].guard_gain_least = min(channels[c].guard_gain_least, channels[c].guard_gain)
+        signal[c, n] *= channels[c].guard_gain
+
+
+@inner
+def _judge_window(state, channels, c, frame, events):
+    peak, mean = channels[c].guard_peak, channels[c].guard_energy / state[0].guard_window
+    tone = peak >= state[0].ceiling * _GUARD_NEAR and peak * peak <= mean * _GUARD_CREST_SQUARE
+    channels[c].guard_count = channels[c].guard_count + 1 if tone else 0
+    channels[c].guard_peak = channels[c].guard_energy = 0.0
+    channels[c].guard_left = state[0].guard_window
+    if channels[c].guard_count >= GUARD_WINDOWS:
+        if channels[c].guard_rest == 0:
+            log(state, events, frame, s.GUARD_EVENT, c, 0.0)
+        channels[c].guard_rest = state[0].guard_hold
 
 
 @inner

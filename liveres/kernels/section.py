@@ -62,6 +62,29 @@ def advance_notch(groups, lanes, ringing, history, g, k, c, signal, start, stop)
 
 
 @inner
+def advance_two_still(lanes, ringing, history, g, k, m, c, signal, start, stop):
+    """Run resting notches k and then m over signal[c, start:stop]: as advance_notch twice, abreast for the processor."""
+    peak_k, level_k, c1_k, c2_k = lanes[g, s.PEAK + k], lanes[g, s.LEVEL + k], lanes[g, s.C1 + k], lanes[g, s.C2 + k]
+    peak_m, level_m, c1_m, c2_m = lanes[g, s.PEAK + m], lanes[g, s.LEVEL + m], lanes[g, s.C1 + m], lanes[g, s.C2 + m]
+    wk1, wk2 = ringing[g, c, k], ringing[g, c, LANES + k]
+    wm1, wm2 = ringing[g, c, m], ringing[g, c, LANES + m]
+    xk1, xk2 = history[g, c, k], history[g, c, LANES + k]
+    xm1, xm2 = history[g, c, m], history[g, c, LANES + m]
+    for n in range(start, stop):
+        x = signal[c, n]
+        w = fma(c1_k, wk1, fma(peak_k, x - xk2, -c2_k * wk2))
+        xk2, xk1, wk2, wk1 = xk1, x, wk1, w
+        x = fma(-level_k, w, x)
+        w = fma(c1_m, wm1, fma(peak_m, x - xm2, -c2_m * wm2))
+        xm2, xm1, wm2, wm1 = xm1, x, wm1, w
+        signal[c, n] = fma(-level_m, w, x)
+    ringing[g, c, k], ringing[g, c, LANES + k] = wk1, wk2
+    ringing[g, c, m], ringing[g, c, LANES + m] = wm1, wm2
+    history[g, c, k], history[g, c, LANES + k] = xk1, xk2
+    history[g, c, m], history[g, c, LANES + m] = xm1, xm2
+
+
+@inner
 def _row(n):
     # where frame n's lane sums begin; the mask tells the compiler that it is never negative, so it vectorises
     return (n & (CHUNK - 1)) * LANES

@@ -42,11 +42,11 @@ GROUPS = NOTCH_GROUPS + RESONATORS_MAX // LANES + SPARE_GROUPS
 
 # --- rows of ``lanes``: where each begins in a group's block --------------------------------------
 _ROWS = iter(range(0, 64 * LANES, LANES))
-# centre w0 [rad/frame] and decay rate -ln R [neper/frame]: now, factor a frame, target
-OMEGA, OMEGA_STEP, OMEGA_END = next(_ROWS), next(_ROWS), next(_ROWS)
-DECAY, DECAY_STEP, DECAY_END = next(_ROWS), next(_ROWS), next(_ROWS)
-# from where a ramp stands to its factor and its target
-TO_STEP, TO_END = LANES, 2 * LANES
+# centre w0 [rad/frame] and decay rate -ln R [neper/frame]: now, factor a frame, factor a SEGMENT, target
+OMEGA, OMEGA_STEP, OMEGA_STRIDE, OMEGA_END = (next(_ROWS) for _ in range(4))
+DECAY, DECAY_STEP, DECAY_STRIDE, DECAY_END = (next(_ROWS) for _ in range(4))
+# from where a ramp stands to its factors and its target
+TO_STEP, TO_STRIDE, TO_END = LANES, 2 * LANES, 3 * LANES
 # the frame from which each ramp stands on its target; passed for one at rest
 CENTRE_LANDS, WIDTH_LANDS, LEVEL_LANDS = next(_ROWS), next(_ROWS), next(_ROWS)
 # the level ramp: 1 / length [1/frame], start and target (d of a notch, g of a resonator)
@@ -59,7 +59,7 @@ C1, C2 = next(_ROWS), next(_ROWS)
 REAL, IMAG, PEAK, TURN, LEVEL = (next(_ROWS) for _ in range(5))
 # from a coefficient's row to that of its growth a frame
 GROWTH = 5 * LANES
-FIELDS = 27
+FIELDS = 29
 
 # --- slow gains -------------------------------------------------------------------------------
 BUS, BUS_LIMIT, GATE = 0, 1, 2
@@ -133,6 +133,7 @@ CHANNEL = np.dtype(
         ("guard_peak", "f8"),  # of the window so far
         ("guard_energy", "f8"),
         ("guard_count", "i8"),  # tone windows in a row
+        ("guard_left", "i8"),  # frames of the window to come
         ("guard_rest", "i8"),  # frames until the guard may return
         ("peak_in", "f8"),  # since the start
         ("peak_out", "f8"),

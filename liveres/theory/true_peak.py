@@ -9,6 +9,7 @@ Thread: control.
 from __future__ import annotations
 
 import numpy as np
+from numpy.lib.stride_tricks import sliding_window_view
 
 _PHASE_0 = (
     0.001708984375, 0.010986328125, -0.0196533203125, 0.033203125, -0.0594482421875, 0.1373291015625,
@@ -20,6 +21,9 @@ _PHASE_1 = (
 )
 PHASES = np.array([_PHASE_0, _PHASE_1, _PHASE_1[::-1], _PHASE_0[::-1]])
 # (4, 12): each row filters the samples and gives one of the four points a frame
+_BATCH = 2048
+# windows worked at a time; their copy stays in the processor's second-level cache
+_WINDOW_TO_POINTS = np.ascontiguousarray(PHASES[:, ::-1].T)
 
 
 class TruePeak:
@@ -36,11 +40,13 @@ class TruePeak:
         """Takes the next frames, (frames, channels) float; samples that are not finite count as 0."""
         sound = np.concatenate([self._past, np.nan_to_num(block.astype(np.float64), nan=0.0, posinf=0.0, neginf=0.0)])
         taps = PHASES.shape[1]
-        frames = len(sound) - taps + 1
-        for phase in PHASES:
-            points = sum(phase[taps - 1 - delay] * sound[delay:delay + frames] for delay in range(taps))
-            self._largest = max(self._largest, float(np.max(np.abs(points), initial=0.0)))
-        self._past = sound[frames:]
+        for channel in sound.T:
+            windows = sliding_window_view(channel, taps)
+            for start in range(0, len(windows), _BATCH):
+                # a copy of the windows, so that one matrix product gives all their points
+                points = np.ascontiguousarray(windows[start : start + _BATCH]) @ _WINDOW_TO_POINTS
+                self._largest = max(self._largest, float(points.max()), -float(points.min()))
+        self._past = sound[len(sound) - taps + 1 :]
 
     def finish(self) -> float:
         """The largest magnitude [linear], the tail of the last samples included."""

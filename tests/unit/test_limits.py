@@ -26,6 +26,9 @@ TABLE = [
     ("DRY_DB", -120, 24, -121, "x must be from -120 to 24 dB or -inf, got -121: use -inf to leave the dry sound out"),
     ("DEPTH_DB", -120, 0, 0.1, "x must be from -120 to 0 dB or -inf, got 0.1: a notch only cuts: use 0 or less, -inf for a null"),
     ("RAMP_S", 0, 600, -1, "x must be from 0 to 600 s, got -1: 0 jumps at once; use several moves for longer journeys"),
+    ("MOVE_FRAME", 0, 2**53, -1, f"x must be from 0 to {2**53:.12g} frames, got -1: choose a frame of the sound, counted from 0"),
+    ("TAIL_S", 0, 600, 601, "x must be from 0 to 600 s, got 601: 60 s outlasts everything a preset can ring"),
+    ("RUN_S", 0.1, 604_800, 0, "x must be from 0.1 to 604800 s, got 0: leave it out to run until stopped"),
     ("CEILING_DB", -60, 0, 1, "x must be from -60 to 0 dBFS, got 1: 0 dBFS is full scale and nothing fits above it"),
     ("LOOKAHEAD_S", 0, 0.02, 0.03, "x must be from 0 to 0.02 s, got 0.03: 0 is zero latency; 0.002 to 0.005 is usual"),
 ]

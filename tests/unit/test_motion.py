@@ -86,8 +86,10 @@ def test_the_pole_on_the_way_is_the_designed_one_over_the_whole_legal_range(at):
     section = legal(*at)
     real, imag, peak = motion.pole_at(section.omega, section.decay_rate)
     assert real == pytest.approx(section.real, abs=1e-10)
-    assert imag == pytest.approx(section.imag, rel=1e-6, abs=1e-10)
-    assert peak == pytest.approx(section.peak, rel=1e-9)
+    # a difference of squares: where the pair nearly turns real it keeps fewer digits, 5e-6 at the very worst
+    assert imag == pytest.approx(section.imag, rel=1e-5)
+    assert imag == pytest.approx(section.imag, abs=5e-9)
+    assert peak == pytest.approx(section.peak, rel=1e-12)
 
 
 @given(PLACES, PLACES)

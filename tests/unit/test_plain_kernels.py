@@ -65,7 +65,7 @@ def glide(m, move):
 def take_in(m, take):
     sound = np.array([[0.5, math.nan], [math.inf, -17.0], [-0.0, 16.0]])
     for c in (0, 1):
-        take(m.state, m.channels, c, sound, 0, m.signal, 3)
+        take(m.state, m.channels, c, sound, 0, m.signal, 3, 0.999)
 
 
 def gather(m, add_up):
