@@ -35,6 +35,9 @@ class Control:
         on channels the engine has not got; trim asked for where the dry sound alone reaches the ceiling
     """
 
+    _late_frames = 0
+    # by how much a command may act after the frame seen when it was given
+
     def __init__(self, preset: Preset, rate_hz: float = 48_000, channels: int = 2):
         if not isinstance(preset, Preset):
             raise ParameterError(f"preset must be a Preset, got {preset!r}: load one with load_preset")
@@ -120,7 +123,7 @@ class Control:
         one = self._find(name)
         lane = self._lane_of.pop(name)
         del self._filters[name], self._sections[name]
-        self._free.give_back(one.kind, lane, self._mask(one), self.frame + int(fade))
+        self._free.give_back(one.kind, lane, self._mask(one), self.frame + int(fade) + self._late_frames)
         self._send([self._row(s.SET_LEVEL, lane, 0.0, fade), *self._bus_rows(fade)])
 
     def reset(self) -> None:

@@ -25,6 +25,8 @@ from liveres.kernels import state as s
 
 LOST_S = 1.0
 # without a callback for so long, and for ten blocks at least, a device counts as gone
+LATE_S = 0.1
+# a command waits for the next callback; this long and two blocks is late even for a system that hiccups
 WATCH_S = 0.1
 CLOSE_S = 2.0
 # PortAudio can wait ten minutes for a sound server that has died
@@ -58,6 +60,7 @@ class Live(Control):
         self.block_frames = limits.check_whole("block_frames", block_frames, limits.BLOCK_FRAMES)
         self.device = device
         super().__init__(preset, rate_hz, channels)
+        self._late_frames = round(LATE_S * self.rate_hz) + 2 * self.block_frames
         self._ask_realtime = realtime
         self._realtime = (False, "the stream is not running")
         self._journal: list[tuple[int, str, dict, float]] = []

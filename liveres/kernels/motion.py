@@ -40,8 +40,8 @@ _WIDEST = math.sqrt(1.0 - PAIR_MARGIN)
 def pole_at(omega, decay):
     """Re p, Im p, (1 - R^2)/2 of the pair that peaks at omega; polynomials, so that lanes go abreast.
 
-    Taylor series on a quarter of the angle and a sixteenth of the decay, doubled back. Good to 1e-10, which is
-    enough on the way: at both ends of a ramp the exact pole stands.
+    Taylor series on a quarter of the angle and a sixteenth of the decay, doubled back. Good to 1e-10, and
+    to 3e-9 where the poles are about to turn real, which is enough on the way: at both ends the exact pole stands.
     """
     q = 0.25 * omega
     z = q * q
