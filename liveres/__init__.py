@@ -11,6 +11,7 @@ _HOMES = {
     "Notch": "liveres.engine.settings",
     "Resonator": "liveres.engine.settings",
     "Preset": "liveres.engine.settings",
+    "Watch": "liveres.engine.watch",
     "Processor": "liveres.engine.processor",
     "Live": "liveres.hosts.live",
     "load_preset": "liveres.presets",

@@ -112,6 +112,10 @@ NOTCHES_MAX = 128
 RESONATORS_MAX = 16_384
 # what one engine holds; more than either has never been wanted in one place
 
+WATCH_NOTCHES = Bound(1, NOTCHES_MAX, "", "8 to 24 is usual")
+WATCH_DEEPEST_DB = Bound(-60, -3, "dB", "-12 to -24 is usual")
+# less than 3 dB would not hold a loop, more than 60 no microphone is quiet enough to need
+
 # --- motion -----------------------------------------------------------------------------------
 
 RAMP_S = Bound(0, 600, "s", "0 jumps at once; use several moves for longer journeys")

@@ -1,8 +1,8 @@
 """Preset files: TOML with the field names of ``liveres.engine.settings``, read strictly, written without loss.
 
-Top-level keys are the fields of Preset; every filter is a ``[[filters]]`` table whose ``kind`` is "notch" or
-"resonator" and whose other keys are the fields of that class. Faults name their place with the filters counted
-from 1, as people count: ``filters[2].centre_hz`` is in the second ``[[filters]]`` table of the file.
+Top-level keys are the fields of Preset, ``[watch]`` holds those of Watch, and every filter is a ``[[filters]]`` table
+whose ``kind`` is "notch" or "resonator" and whose other keys are the fields of that class. Faults name their place with
+the filters counted from 1, as people count: ``filters[2].centre_hz`` is in the file's second ``[[filters]]`` table.
 Thread: control.
 """
 
@@ -12,6 +12,7 @@ import json
 import os
 import re
 import tomllib
+from dataclasses import asdict
 from typing import TYPE_CHECKING
 
 from liveres import limits
@@ -28,6 +29,7 @@ from liveres.engine.settings import (
     excess_kinds,
     repeated_names,
 )
+from liveres.engine.watch import WATCH_CHECKS, Watch
 from liveres.errors import Fault, FileError, ParameterError, nearest
 from liveres.files import atomic_target, number_text, read_text
 from liveres.toml_lines import Place, dotted, line_of, value_lines
@@ -67,13 +69,14 @@ def _read_preset(path: object, text: str) -> Preset:
     data = _parse(path, text)
     faults: list[tuple[Place, str]] = []
     filters = data.pop("filters", [])
+    watch = _read_watch(data.pop("watch", None), faults)
     values = _take(data, {key: PRESET_CHECKS[key] for key in _TOP_KEYS}, "a preset", (), faults)
     rate_hz = values.get("rate_hz", None if "rate_hz" in data else Preset.rate_hz)
     made = _read_filters(filters, rate_hz, faults)
     if faults:
         lines = value_lines(text)
         raise FileError(path, [Fault(dotted(place), message, line_of(lines, place)) for place, message in faults])
-    return Preset(filters=made, **values)
+    return Preset(filters=made, watch=watch, **values)
 
 
 def _parse(path: object, text: str) -> dict[str, object]:
@@ -88,6 +91,16 @@ def _parse(path: object, text: str) -> dict[str, object]:
     if not data:
         raise FileError(path, [Fault("", "file must set at least one key, got comments alone: write a preset into it")])
     return data
+
+
+def _read_watch(table: object, faults: list[tuple[Place, str]]) -> Watch | None:
+    if table is None:
+        return None
+    if not isinstance(table, dict):
+        faults.append((("watch",), f"watch must be a table, got {table!r:.60}: begin it with [watch]"))
+        return None
+    good = _take(table, WATCH_CHECKS, "a watch", ("watch",), faults)
+    return Watch(**good)
 
 
 def _read_filters(tables: object, rate_hz: float | None, faults: list[tuple[Place, str]]) -> list[Filter | None]:
@@ -206,6 +219,8 @@ def _filter_values(one: Filter) -> dict[str, object]:
 
 def _fresh_text(preset: Preset) -> str:
     top = _pairs(_top_values(preset), {"title": "", "notes": ""})
+    if preset.watch is not None:
+        top += f"\n[watch]\n{_pairs(asdict(preset.watch), {})}"
     return top + "".join(f"\n[[filters]]\n{_pairs(_filter_values(one), _FILTER_DEFAULTS)}" for one in preset.filters)
 
 
@@ -236,7 +251,11 @@ def _merged_text(old: str, preset: Preset) -> str | None:
         tomllib.loads(old)
         document = tomlkit.parse(old if old.endswith("\n") else old + "\n")
         held, ending = _cut_filters(document)
+        watch = document.pop("watch", None) or tomlkit.table()
         _update(document, _top_values(preset), _DEFAULTS)
+        if preset.watch is not None:
+            _update(watch, asdict(preset.watch), {})
+            document.append("watch", watch)
         if preset.filters:
             document.append("filters", tomlkit.aot())
         for one in preset.filters:

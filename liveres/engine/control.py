@@ -43,6 +43,9 @@ class Control:
             raise ParameterError(f"preset must be a Preset, got {preset!r}: load one with load_preset")
         self.rate_hz = limits.RATE_HZ.check("rate_hz", rate_hz)
         self.channels = limits.check_whole("channels", channels, limits.CHANNELS)
+        if preset.watch is not None:
+            message = f"watch must be None, since this release cannot listen for howl, got {preset.watch}: take it out"
+            raise ParameterError(message)
         self.preset = preset.at_rate(self.rate_hz)
         self.memory = Memory(self.preset, self.rate_hz, self.channels)
         self._arrays = self.memory.arrays

@@ -12,6 +12,7 @@ from dataclasses import dataclass, field
 from functools import partial
 
 from liveres import limits
+from liveres.engine.watch import Watch
 from liveres.errors import ParameterError, nearest
 from liveres.theory import poles
 from liveres.units import gain_from_db
@@ -178,7 +179,7 @@ class Preset:
     guard : bool; step a sustained tone near the ceiling down
     trim : bool; scale the resonator bus so that no full-scale sine can pass the ceiling
     rate_hz : float [Hz], closed [8000, 192000]; what pole radii refer to. Elsewhere centres and decays are kept
-    watch : None; settings of the howl watch
+    watch : Watch or None; settings of the howl watch
     title, notes : str, for people
     Raises : ParameterError - a field outside its range; a filter illegal at rate_hz; a name twice; too many filters
     """
@@ -191,7 +192,7 @@ class Preset:
     guard: bool = True
     trim: bool = False
     rate_hz: float = 48_000
-    watch: None = None
+    watch: Watch | None = None
     title: str = ""
     notes: str = ""
 
@@ -304,6 +305,12 @@ def _check_text(name: str, value: object) -> str:
     return value
 
 
+def _check_watch(name: str, value: object) -> Watch | None:
+    if value is not None and not isinstance(value, Watch):
+        raise ParameterError(f"{name} must be a Watch or None, got {value!r}: make one with Watch(...)")
+    return value
+
+
 def _check_radius(name: str, value: object) -> float:
     radius = _RADIUS.check(name, value)
     if not radius < 1.0:
@@ -342,6 +349,7 @@ PRESET_CHECKS: dict[str, Check] = {
     "trim": limits.check_flag,
     "title": _check_text,
     "notes": _check_text,
+    "watch": _check_watch,
 }
 # what one field may hold whatever the others do: made values, files and moves are all checked by these
 

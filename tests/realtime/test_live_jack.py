@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import json
+import os
 import subprocess
 import sys
 import time
 
 import numpy as np
+import pytest
 from tools import meters, rigs
 
 from liveres import Notch, Preset, Processor, Resonator, save_preset
@@ -61,6 +63,30 @@ def test_no_callback_is_lost_to_a_busy_interpreter_where_a_python_callback_loses
     assert said["lost"]["native"] < 0.01
     assert said["lost"]["python"] > 0.1
     assert said["counters"]["worst_callback_s"] < said["counters"]["period_s"]
+
+
+SCHEDULING = """
+import json, os, sys
+from liveres import Live, Preset
+with Live(Preset(), "system", 1024, realtime=sys.argv[1] == "yes") as live:
+    thread = int(live._stats["thread"][0])
+    print(json.dumps({**live.counters(), "policy": os.sched_getscheduler(thread)}))
+"""
+
+
+@pytest.mark.parametrize("asked", ["yes", "no"])
+def test_real_time_scheduling_is_asked_for_and_reported_as_it_is(jack_server, asked):
+    """The server of this test runs without; what is reported must be what the system says of the thread itself."""
+    ended = subprocess.run(
+        [sys.executable, "-c", SCHEDULING, asked], env=jack_server.environment, capture_output=True, text=True, timeout=60
+    )
+    assert ended.returncode == 0, ended.stderr
+    said = json.loads(ended.stdout.splitlines()[-1])
+    assert said["realtime"] == (said["policy"] in (os.SCHED_FIFO, os.SCHED_RR))
+    if asked == "no":
+        assert (said["realtime"], said["realtime_why"]) == (False, "not asked for")
+    else:
+        assert said["realtime_why"].startswith("granted" if said["realtime"] else "the system refused it")
 
 
 SESSION = """

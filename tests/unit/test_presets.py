@@ -98,9 +98,11 @@ def test_filters_may_be_written_as_an_inline_list(path):
 TOP_FAULTS = [
     ("titel = 'x'", "titel",
      "'titel' is not a key of a preset: did you mean title?"),
-    ("watch = 3", "watch",
-     "'watch' is not a key of a preset: use one of title, notes, rate_hz, input_db, dry_db, ceiling_db, lookahead_s, "
+    ("loudness = 3", "loudness",
+     "'loudness' is not a key of a preset: use one of title, notes, rate_hz, input_db, dry_db, ceiling_db, lookahead_s, "
      "guard, trim"),
+    ("watch = 3", "watch",
+     "watch must be a table, got 3: begin it with [watch]"),
     ("title = 3", "title",
      "title must be text, got 3: put it in quotes"),
     ("guard = 1", "guard",
