@@ -10,6 +10,7 @@ Thread: control, under the lock of whoever owns it.
 
 from __future__ import annotations
 
+import bisect
 import time
 
 import numpy as np
@@ -36,13 +37,16 @@ class Mailbox:
         self._address = self.mail.ctypes.data
         self._taken_at = self._address + c.MAIL.fields["taken"][1]
         self._log_read = 0
-        self._frames: list[tuple[int, int]] = []
+        self._lasts: list[int] = []
+        self._frames: list[int] = []
+        # of every slot taken: its last command and the frame before which it was carried out
 
     def send(self, rows: list[list[float]]) -> None:
         """Publish commands, and again those not known to be taken.
 
         Raises : DeviceError - the audio thread takes nothing any more
         """
+        self._read_log()
         deadline = time.monotonic() + PATIENCE_S
         while True:
             taken = self.taken
@@ -68,11 +72,16 @@ class Mailbox:
 
     def frame_of(self, sequence: int) -> int | None:
         """Frame before which the command ``sequence`` was carried out; None while it is on its way."""
+        self._read_log()
+        place = bisect.bisect_left(self._lasts, sequence)
+        return self._frames[place] if place < len(self._lasts) else None
+
+    def _read_log(self) -> None:
+        # at every send, and a send is taken once at the most, so the ring cannot run over in between
         _ = self.taken
         count = int(self.mail["log_count"][0])
-        for number in range(max(self._log_read, count - c.LOG_ROWS), count):
+        for number in range(self._log_read, count):
             last, frame = self.log[number % c.LOG_ROWS]
-            self._frames.append((int(last), int(frame)))
+            self._lasts.append(int(last))
+            self._frames.append(int(frame))
         self._log_read = count
-        place = np.searchsorted([last for last, _ in self._frames], sequence)
-        return self._frames[place][1] if place < len(self._frames) else None
