@@ -10,4 +10,4 @@ def announce_compiling() -> None:
     from liveres.kernels._jit import cache_is_cold
 
     if cache_is_cold():
-        print("liveres: compiling the engine, once; this takes some ten seconds, the next start is quick", file=sys.stderr)
+        print("liveres: compiling the engine, once; this can take half a minute, the next start is quick", file=sys.stderr)

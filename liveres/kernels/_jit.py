@@ -1,6 +1,7 @@
 """How kernels are compiled: Numba's options, the compile cache, and the few machine instructions Numba lacks.
 
-The only place with Numba options. No fastmath: sums keep their order, so results keep their bits.
+The only place with Numba options. Counters begin as int64(0): a bare 0 is a type of its own to Numba, for which it would
+compile everything they are passed to once more. No fastmath: sums keep their order, so results keep their bits.
 
 Cache: a per-user folder named by a hash of every kernel source, because Numba notices a change in a function's
 own file only, and would go on running old code when a helper in another file changed. Where that folder cannot
@@ -24,8 +25,9 @@ from numba import types
 from numba.core import cgutils
 from numba.extending import intrinsic
 
-_OPTIONS = {"error_model": "numpy", "fastmath": False, "boundscheck": False}
-# numpy: a division by zero gives infinity instead of an exception, which an audio thread may not raise
+_OPTIONS = {"error_model": "numpy", "fastmath": False, "boundscheck": False, "no_cfunc_wrapper": True}
+# numpy: a division by zero gives infinity instead of an exception, which an audio thread may not raise;
+# no_cfunc_wrapper: nobody calls kernels from C, and a wrapper less is quicker to compile
 
 _X86 = platform.machine().lower() in ("x86_64", "amd64")
 _ARM = platform.machine().lower() in ("aarch64", "arm64")

@@ -38,7 +38,7 @@ def _stretch(groups, lanes, ringing, g, frame, position, count):
 @inner
 def _run_chain(groups, lanes, masks, ringing, history, g, c, signal, start, stop):
     # one group's notches on one channel, in order; at rest two at a time
-    waiting = -1
+    waiting = int64(-1)
     for k in range(LANES):
         at_work = lanes[g, s.LEVEL + k] != 0.0 or lanes[g, s.LEVEL + s.GROWTH + k] != 0.0
         if not (at_work and masks[g, k] >> c & 1):
@@ -49,7 +49,7 @@ def _run_chain(groups, lanes, masks, ringing, history, g, c, signal, start, stop
             waiting = k
         else:
             section.advance_two_still(lanes, ringing, history, g, waiting, k, c, signal, start, stop)
-            waiting = -1
+            waiting = int64(-1)
     if waiting >= 0:
         section.advance_notch(groups, lanes, ringing, history, g, waiting, c, signal, start, stop)
 
@@ -57,7 +57,7 @@ def _run_chain(groups, lanes, masks, ringing, history, g, c, signal, start, stop
 @inner
 def _run_notches(state, groups, lanes, masks, ringing, history, signal, count):
     for g in range(min(s.NOTCH_GROUPS, state[0].groups_used)):
-        position = 0
+        position = int64(0)
         while position < count and (groups[g].moving or groups[g].awake):
             frames = _stretch(groups, lanes, ringing, g, state[0].frame, position, count)
             for c in range(ringing.shape[1]):
@@ -72,7 +72,7 @@ def _run_bank(state, groups, lanes, ringing, feed, sums, count):
     # True when any resonator sounded
     sounded = False
     for g in range(s.NOTCH_GROUPS, state[0].groups_used):
-        position = 0
+        position = int64(0)
         while position < count and (groups[g].moving or groups[g].awake):
             frames = _stretch(groups, lanes, ringing, g, state[0].frame, position, count)
             stop = position + frames
@@ -125,7 +125,7 @@ def advance_block(
     signal, feed, bus, slow, sums, look, marks, events, x, y,
 ):  # fmt: skip
     """Process x (frames, channels) float64 into y of the same shape."""
-    position = 0
+    position = int64(0)
     while position < x.shape[0]:
         count = _chunk_frames(state, channels, x.shape[0] - position)
         fall = state[0].meter_fall ** count

@@ -177,7 +177,7 @@ def audio_callback(input_at, output_at, frames, time_info, flags, user):
         mail, ports.mail, ports.mail + _TAKEN_AT, counts, rows, log,
         state, channels, groups, lanes, masks, ringing, history, glides,
     )  # fmt: skip
-    position = 0
+    position = int64(0)
     while position < count:
         size = min(count - position, s.CHUNK)
         x = carray(pointer(ports.x), (size, channel_count), np.float64)

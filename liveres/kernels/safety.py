@@ -16,6 +16,8 @@ from __future__ import annotations
 
 import math
 
+from numba import int64
+
 from liveres.kernels import lookahead
 from liveres.kernels import state as s
 from liveres.kernels._jit import inner
@@ -156,7 +158,7 @@ def _limit(state, channels, c, signal, look, marks, count):
 
 @inner
 def _guard(state, channels, c, signal, count, events):
-    position = 0
+    position = int64(0)
     while position < count:
         stop = min(count, position + channels[c].guard_left)
         peak, energy = channels[c].guard_peak, channels[c].guard_energy
