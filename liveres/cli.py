@@ -20,6 +20,12 @@ from typing import NoReturn
 
 from liveres import __version__, limits
 from liveres.errors import AudioFileError, FileError, LiveresError, ParameterError, nearest
+from liveres.rooms.bounds import DELAY_FRAMES, ROOMS, SEED, SOURCES, SYSTEM_GAIN_DB
+
+
+def _list(table: dict[str, str]) -> str:
+    return "\n".join(f"  {name:<9} {line}" for name, line in table.items())
+
 
 _ABOUT = """\
 A real-time resonator and notch host: find and cut feedback, tune and play banks of resonators,
@@ -80,6 +86,23 @@ _LIVE_EXAMPLES = """\
 examples:
   liveres live --preset hall.toml
   liveres live --preset hall.toml --device "USB" --block 64 --rate 48000 --channels 2
+"""
+_REHEARSE = """\
+Run a preset in a simulated room: a loudspeaker, a microphone and the way between them, with no sound card. The room
+says how much system gain it bears before it howls; past that it howls, and a notch in the right place stops it.
+
+A room is one of those below, or an impulse response measured in yours. It is scaled to howl at a system gain of +6 dB
+when nothing is done to the sound. On a terminal it runs in real time, elsewhere and with --no-screen as fast as it goes.
+"""
+_REHEARSE_EXAMPLES = f"""\
+rooms:
+{_list(ROOMS)}
+sources:
+{_list(SOURCES)}
+examples:
+  liveres rehearse
+  liveres rehearse --room church --source noise --gain 8 --seconds 20
+  liveres rehearse --room my-hall.wav --preset hall.toml --gain 3 --no-screen
 """
 
 
@@ -174,6 +197,20 @@ def _fill_live(parser: _Parser) -> None:
     _add_json(parser)
 
 
+def _fill_rehearse(parser: _Parser) -> None:
+    parser.add_argument("--preset", metavar="FILE", help="what to do to the sound; straight through when left out")
+    parser.add_argument("--room", default="hall", metavar="ROOM", help="a room below or a sound file; hall if left out")
+    parser.add_argument("--source", default="speech", metavar="SOURCE", help="a source below or a sound file; speech if left out")
+    _add_number(parser, "--gain", SYSTEM_GAIN_DB, 0.0, "system gain, from the program's output to the loudspeaker")
+    _add_number(parser, "--delay-frames", DELAY_FRAMES, 0, "delay of converters on top of the 64 of one block", whole=True)
+    _add_number(parser, "--block", limits.BLOCK_FRAMES, 64, "frames in one go; the result does not depend on it", whole=True)
+    _add_number(parser, "--rate", limits.RATE_HZ, 48_000, "sample rate, that of every sound file used")
+    _add_number(parser, "--seconds", limits.RUN_S, None, "stop by itself after so long; after 10 s where nobody can stop it")
+    _add_number(parser, "--seed", SEED, 0, "what all noise follows from", whole=True)
+    parser.add_argument("--no-screen", action="store_true", help="as fast as it goes, and only say how it went")
+    _add_json(parser)
+
+
 def _add_number(
     parser: _Parser, option: str, bound: limits.Bound, default: float | None, line: str, whole: bool = False
 ) -> None:
@@ -204,6 +241,7 @@ _TABLE: dict[str, tuple[Callable[[_Parser], None], str, str, str]] = {
     "check": (_fill_check, "say what is wrong with files", _CHECK, _CHECK_EXAMPLES),
     "devices": (_fill_devices, "list the sound devices", _DEVICES, _DEVICES_EXAMPLES),
     "live": (_fill_live, "run a preset on a sound device", _LIVE, _LIVE_EXAMPLES),
+    "rehearse": (_fill_rehearse, "run a preset in a simulated room", _REHEARSE, _REHEARSE_EXAMPLES),
 }
 
 

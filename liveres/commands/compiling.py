@@ -5,9 +5,9 @@ from __future__ import annotations
 import sys
 
 
-def announce_compiling() -> None:
-    """Say on standard error that compiling takes a while, if it is about to."""
+def announce_compiling(live: bool = False) -> None:
+    """Say on standard error that compiling takes a while, if it is about to; live sound needs a function more."""
     from liveres.kernels._jit import cache_is_cold
 
-    if cache_is_cold():
+    if cache_is_cold("callback.audio_callback" if live else "block.advance"):
         print("liveres: compiling the engine, once; this can take half a minute, the next start is quick", file=sys.stderr)

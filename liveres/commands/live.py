@@ -4,23 +4,25 @@ from __future__ import annotations
 
 import argparse
 import json
+import re
+import shutil
 import sys
 import time
 
 from liveres.commands.compiling import announce_compiling
 from liveres.engine.settings import Preset
-from liveres.errors import DeviceError
-from liveres.hosts.portaudio import import_sounddevice
+from liveres.errors import DeviceError, ParameterError
+from liveres.hosts.portaudio import check_device
 from liveres.json_values import for_json
 from liveres.presets import load_preset
 
 LINE_S = 0.1
 # ten readings a second; a log that is no terminal gets one
 LOG_S = 1.0
-CAUTION = (
-    "Mind your ears and your loudspeakers: begin with the amplifier low and raise it by hand. The program knows full scale, "
-    "not how loud the room is; local rules on sound levels and the licensed person in charge have the last word."
-)
+CAUTION = """\
+Mind your ears and your loudspeakers: begin with the amplifier low and raise it
+by hand. The program knows full scale, not how loud the room is; local rules on
+sound levels and the licensed person in charge have the last word."""
 
 
 def run(args: argparse.Namespace) -> int:
@@ -30,11 +32,12 @@ def run(args: argparse.Namespace) -> int:
     Raises : ParameterError, FileError - the preset is wrong; DeviceError - no device, or one that will not close
     """
     preset = load_preset(args.preset) if args.preset else Preset()
-    import_sounddevice()
-    announce_compiling()
+    device = _device(args.device)
+    check_device(device, args.channels)
+    announce_compiling(live=True)
     from liveres.hosts.live import Live
 
-    live = Live(preset, _device(args.device), args.block, args.rate, args.channels)
+    live = Live(preset, device, args.block, args.rate, args.channels)
     try:
         live.start()
         _say(args, _opening(live))
@@ -57,7 +60,11 @@ def run(args: argparse.Namespace) -> int:
 
 
 def _device(text: str | None) -> object:
-    return int(text) if text is not None and text.isdigit() else text
+    if text is not None and re.fullmatch(r"-?\d+", text):
+        return int(text)
+    if text is not None and not text.strip():
+        raise ParameterError("--device must be a name or a number, got nothing: see liveres devices")
+    return text
 
 
 def _opening(live: object) -> list[str]:
@@ -66,8 +73,8 @@ def _opening(live: object) -> list[str]:
     state = "real-time" if counters["realtime"] else "NOT real-time"
     return [
         CAUTION,
-        f"{live.channels} channels at {live.rate_hz:g} Hz, blocks of {live.block_frames} frames, "
-        f"latency at least {delay_ms:.1f} ms",
+        f"{live.channels} channel{'s' if live.channels > 1 else ''} at {live.rate_hz:g} Hz, "
+        f"blocks of {live.block_frames} frames, latency at least {delay_ms:.1f} ms",
         f"audio thread: {state}, {counters['realtime_why']}",
         "fading in over 1 s; Ctrl-C fades out and ends",
     ]
@@ -81,7 +88,9 @@ def _meter(args: argparse.Namespace, live: object) -> None:
         if args.seconds is not None and ran_s >= args.seconds:
             break
         if on_terminal:
-            print(f"\r{_line(live)}\x1b[K", end="", flush=True)
+            # one column less than there are, or some terminals begin a new line
+            line = _line(live)[: shutil.get_terminal_size().columns - 1]
+            print(f"\r{line}\x1b[K", end="", flush=True)
         elif ran_s - spoken >= LOG_S:
             spoken = ran_s
             _say(args, [_line(live)])
@@ -96,7 +105,8 @@ def _line(live: object) -> str:
     hitches = counters["output_underflows"] + counters["input_overflows"]
     return (
         f"in {meters['recent_peak_in_db']:6.1f}  out {meters['recent_peak_out_db']:6.1f} dBFS  "
-        f"limiter {meters['limiter_db']:5.1f}  guard {meters['guard_db']:5.1f} dB  load {load:3.0f} %  hitches {hitches}"
+        f"limiter {meters['limiter_db']:5.1f}  guard {meters['guard_db']:5.1f}  "
+        f"load {load:.0f} %  hitches {hitches}"
     )
 
 

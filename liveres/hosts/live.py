@@ -10,6 +10,7 @@ import contextlib
 import os
 import threading
 import time
+from types import ModuleType
 
 import numpy as np
 
@@ -19,7 +20,7 @@ from liveres.engine.mailbox import Mailbox
 from liveres.engine.moves import Move
 from liveres.engine.settings import Preset
 from liveres.errors import DeviceError
-from liveres.hosts.portaudio import import_sounddevice
+from liveres.hosts.portaudio import check_device, import_sounddevice
 from liveres.kernels import callback as c
 from liveres.kernels import state as s
 
@@ -81,6 +82,7 @@ class Live(Control):
         Raises : DeviceError - the device is missing or refuses
         """
         sd = import_sounddevice()
+        check_device(self.device, self.channels)
         try:
             self._stream = sd._StreamBase(
                 "duplex",
@@ -101,7 +103,7 @@ class Live(Control):
             if self._stream is not None:
                 self._stream.close()
                 self._stream = None
-            raise DeviceError(self._refusal(error)) from None
+            raise DeviceError(self._refusal(sd, error)) from None
         self._realtime = self._get_realtime()
         threading.Thread(target=self._watch, name="liveres-watch", daemon=True).start()
 
@@ -259,7 +261,12 @@ class Live(Control):
         with contextlib.suppress(Exception):
             time.sleep(limits.MUTE_S + sum(self.latency_s))
 
-    def _refusal(self, error: Exception) -> str:
-        asked = f"{self.channels} channels in and out at rate_hz {self.rate_hz:.12g}"
-        name = "the default device" if self.device is None else f"device {self.device!r}"
-        return f"{name} must offer {asked}, it said {error}: see liveres devices for what there is"
+    def _refusal(self, sd: ModuleType, error: Exception) -> str:
+        pair = self.device if isinstance(self.device, (tuple, list)) else (self.device, self.device)
+        if "Invalid sample rate" in str(error):
+            usual = sd.query_devices(pair[1], "output")["default_samplerate"]
+            return f"rate_hz must be one the device runs at, got {self.rate_hz:g}: its usual one is {usual:g}"
+        return (
+            f"the device must open with {self.channels} channels in and out, rate_hz {self.rate_hz:g} and blocks of "
+            f"{self.block_frames} frames, it said {error}: close other programs that hold it, or see liveres devices"
+        )

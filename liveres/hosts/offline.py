@@ -35,6 +35,9 @@ from liveres.units import db_from_gain, gain_from_db
 _PIECE_FRAMES = 16_384
 # read and written at once, rounded up to whole blocks: far above the cost of a call, far below that of memory
 
+_STILL_RINGS_DB = -60.0
+# a resonator cut off above this is heard to be cut off
+
 Progress = Callable[[int, int], object]
 # called with the frames written and the frames expected, after every piece
 
@@ -213,5 +216,11 @@ class _Run:
             )
         if sink.clipped:
             yield f"samples clipped at full scale: {sink.clipped}; a ceiling_db below 0 leaves them room"
+        ringing_db = self.processor.meters()["recent_peak_out_db"]
+        if self.processor.longest_decay_s and ringing_db > _STILL_RINGS_DB:
+            yield (
+                f"the output ends while it still rings at {ringing_db:.0f} dBFS; "
+                f"--tail {math.ceil(self.tail_frames / self.source.rate_hz + self.processor.longest_decay_s)} lets it ring out"
+            )
         if self.moves:
             yield f"moves after the end, not made: {len(self.moves)}; a longer tail makes room for them"

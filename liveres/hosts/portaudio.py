@@ -11,7 +11,7 @@ import sys
 from pathlib import Path
 from types import ModuleType
 
-from liveres.errors import DeviceError
+from liveres.errors import DeviceError, nearest
 
 _CLIENT_NAME = ctypes.c_char_p(b"liveres")
 # PortAudio keeps the pointer, so the name lives as long as the module
@@ -47,6 +47,27 @@ def import_sounddevice() -> ModuleType:
             f"the sound system must start for live sound, got {error}: check that sound works in another program; {_OFFLINE}"
         ) from None
     return sounddevice
+
+
+def check_device(device: object, channels: int) -> None:
+    """DeviceError unless there is such a device with so many channels in and out; takes no time and opens nothing.
+
+    device : as sounddevice takes it: None, a number, part of a name, or a pair of these for input and output
+    """
+    sounddevice = import_sounddevice()
+    known = [one["name"] for one in sounddevice.query_devices()]
+    if not known:
+        raise DeviceError("a sound device must be there, got none: connect one or start the sound server")
+    pair = device if isinstance(device, (tuple, list)) else (device, device)
+    for one, way in zip(pair, ("input", "output"), strict=True):
+        try:
+            found = sounddevice.query_devices(one, way)
+        except (ValueError, sounddevice.PortAudioError):
+            remedy = nearest(str(one), dict.fromkeys(known))
+            raise DeviceError(f"device must be one for {way} that liveres devices lists, got {one!r}: {remedy}") from None
+        most = found[f"max_{way}_channels"]
+        if channels > most:
+            raise DeviceError(f"channels must be at most {most} for {way} on {found['name']}, got {channels}: use fewer")
 
 
 def _name_jack_client(sounddevice: ModuleType) -> None:

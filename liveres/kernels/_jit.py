@@ -52,9 +52,9 @@ def cache_dir() -> Path:
     return Path(tempfile.gettempdir()) / f"liveres-{os.getuid() if hasattr(os, 'getuid') else 'user'}-{folder.name}"
 
 
-def cache_is_cold() -> bool:
-    """True when the kernels have yet to be compiled on this machine, which takes some seconds."""
-    return not any(cache_dir().rglob("block.advance*.nbc"))
+def cache_is_cold(function: str = "block.advance") -> bool:
+    """True when a function, by module and name, has yet to be compiled on this machine, which can take half a minute."""
+    return not any(cache_dir().rglob(f"{function}*.nbc"))
 
 
 @contextlib.contextmanager

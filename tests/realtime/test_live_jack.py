@@ -17,6 +17,7 @@ from liveres import Notch, Preset, Processor, Resonator, save_preset
 UNDER_STRESS = """
 import json, sys, threading, time
 import sounddevice as sd
+from time import monotonic as clock
 from liveres import Live, Notch, Preset
 
 SECONDS, PERIOD_FRAMES = 3.0, int(sys.argv[1])
@@ -36,18 +37,23 @@ with Live(Preset([Notch(f"n{k}", 100 * 1.2**k, -12, bandwidth_oct=0.1) for k in 
     time.sleep(SECONDS)
     counters, took = live.counters(), time.monotonic() - began
     lost["native"] = 1 - (counters["callbacks"] - before) * PERIOD_FRAMES / 48_000 / took
-calls = 0
+calls = xruns = 0
+entries = []
 def copy(indata, outdata, frames, time, status):
-    global calls
+    global calls, xruns
+    entries.append(clock())
     outdata[:] = indata
     calls += 1
+    xruns += bool(status.output_underflow)
 with sd.Stream(device="system", samplerate=48_000, blocksize=PERIOD_FRAMES, channels=2, callback=copy):
     time.sleep(0.5)
     before, began = calls, time.monotonic()
     time.sleep(SECONDS)
     lost["python"] = 1 - (calls - before) * PERIOD_FRAMES / 48_000 / (time.monotonic() - began)
 stop.set()
-print(json.dumps({"lost": lost, "counters": counters}))
+gaps = [b - a for a, b in zip(entries, entries[1:])]
+late = sum(gap > 2 * PERIOD_FRAMES / 48_000 for gap in gaps) / len(gaps)
+print(json.dumps({"lost": lost, "late": late, "xruns": xruns, "calls": calls, "counters": counters}))
 """
 
 
@@ -60,9 +66,13 @@ def test_no_callback_is_lost_to_a_busy_interpreter_where_a_python_callback_loses
     assert ended.returncode == 0, ended.stderr
     said = json.loads(ended.stdout.splitlines()[-1])
     print(said)
-    assert said["lost"]["native"] < 0.01
-    assert said["lost"]["python"] > 0.1
-    assert said["counters"]["worst_callback_s"] < said["counters"]["period_s"]
+    counters = said["counters"]
+    # how a late callback shows differs from run to run: it is missed, comes late, or the server counts a hitch
+    native = max(said["lost"]["native"], counters["output_underflows"] / counters["callbacks"])
+    python = max(said["lost"]["python"], said["late"], said["xruns"] / said["calls"])
+    assert native < 0.02
+    assert python > max(0.05, 5 * native)
+    assert counters["worst_callback_s"] < counters["period_s"]
 
 
 SCHEDULING = """
@@ -139,7 +149,8 @@ def test_a_rate_the_server_has_not_got_is_refused_in_one_line(jack_server):
         env=jack_server.environment, capture_output=True, text=True, timeout=60,
     )  # fmt: skip
     assert ended.returncode == 1
-    assert "rate_hz 44100" in ended.stderr and "Traceback" not in ended.stderr
+    assert "liveres: rate_hz must be one the device runs at, got 44100: its usual one is 48000\n" in ended.stderr
+    assert "Traceback" not in ended.stderr
 
 
 def test_devices_lists_the_server(jack_server):
