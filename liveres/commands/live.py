@@ -82,6 +82,14 @@ def _opening(live: object) -> list[str]:
 
 def _meter(args: argparse.Namespace, live: object) -> None:
     on_terminal = sys.stdout.isatty() and not args.json
+    try:
+        _read_out(args, live, on_terminal)
+    finally:
+        if on_terminal:
+            print()
+
+
+def _read_out(args: argparse.Namespace, live: object, on_terminal: bool) -> None:
     began, spoken = time.monotonic(), 0.0
     while live.lost is None:
         ran_s = time.monotonic() - began
@@ -95,8 +103,6 @@ def _meter(args: argparse.Namespace, live: object) -> None:
             spoken = ran_s
             _say(args, [_line(live)])
         time.sleep(LINE_S if args.seconds is None else min(LINE_S, max(args.seconds - ran_s, 0.0)))
-    if on_terminal:
-        print()
 
 
 def _line(live: object) -> str:

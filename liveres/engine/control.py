@@ -1,12 +1,17 @@
 """The control side of an engine: what its filters are, and the commands that move them.
 
 ``Control`` knows names, settings and lanes; it turns each wish into command rows and hands them to whoever runs the
-kernel: ``Processor`` in the caller's thread, ``Live`` in the sound system's. Thread: control.
+kernel: ``Processor`` in the caller's thread, ``Live`` in the sound system's. Several threads may steer; one at a time does.
+Thread: control.
 """
 
 from __future__ import annotations
 
+import functools
 import heapq
+import threading
+from collections.abc import Callable
+from typing import TypeVar
 
 import numpy as np
 
@@ -21,8 +26,20 @@ from liveres.theory.poles import Section, decay_from_radius
 from liveres.theory.response import bus_limit_db, trim_gain
 from liveres.units import gain_from_db
 
+Result = TypeVar("Result")
 LEAVE = -1.0
 # a ramp of this length leaves the ramp that is under way
+
+
+def _one_at_a_time(method: Callable[..., Result]) -> Callable[..., Result]:
+    """Let one thread at a time steer: a command's number, its filter and its place in the queue belong together."""
+
+    @functools.wraps(method)
+    def alone(self: Control, *arguments: object, **keywords: object) -> Result:
+        with self._steering:
+            return method(self, *arguments, **keywords)
+
+    return alone
 
 
 class Control:
@@ -39,6 +56,7 @@ class Control:
     # by how much a command may act after the frame seen when it was given
 
     def __init__(self, preset: Preset, rate_hz: float = 48_000, channels: int = 2):
+        self._steering = threading.RLock()
         if not isinstance(preset, Preset):
             raise ParameterError(f"preset must be a Preset, got {preset!r}: load one with load_preset")
         self.rate_hz = limits.RATE_HZ.check("rate_hz", rate_hz)
@@ -69,6 +87,7 @@ class Control:
 
     # --- moving filters ----------------------------------------------------------------------------
 
+    @_one_at_a_time
     def retune(self, name: str, *, ramp_s: float = limits.RETUNE_S, **changes: object) -> None:
         """Move a filter to new settings over ``ramp_s``, evenly in log frequency and log decay.
 
@@ -101,6 +120,7 @@ class Control:
             rows += self._bus_rows(ramp)
         self._send(rows)
 
+    @_one_at_a_time
     def add(self, one: Filter, *, fade_s: float = limits.FADE_S) -> None:
         """Put a filter in, faded in over ``fade_s``.
 
@@ -117,6 +137,7 @@ class Control:
         fade = self._frames("fade_s", fade_s)
         self._send(self._place(one, fade) + self._bus_rows(fade))
 
+    @_one_at_a_time
     def remove(self, name: str, *, fade_s: float = limits.FADE_S) -> None:
         """Take a filter out, faded out over ``fade_s``.
 
@@ -129,14 +150,17 @@ class Control:
         self._free.give_back(one.kind, lane, self._mask(one), self.frame + int(fade) + self._late_frames)
         self._send([self._row(s.SET_LEVEL, lane, 0.0, fade), *self._bus_rows(fade)])
 
+    @_one_at_a_time
     def reset(self) -> None:
         """Clear the delay registers: what rings stops. Settings and ramps stay."""
         self._send([self._row(s.RESET)])
 
+    @_one_at_a_time
     def mute(self, *, ramp_s: float = limits.MUTE_S) -> None:
         """Fade the output to silence over ``ramp_s``."""
         self._send([self._row(s.GLIDE_TO, s.GATE, 0.0, self._frames("ramp_s", ramp_s))])
 
+    @_one_at_a_time
     def unmute(self, *, ramp_s: float = limits.UNMUTE_S) -> None:
         """Fade the output in over ``ramp_s``."""
         self._send([self._row(s.GLIDE_TO, s.GATE, 1.0, self._frames("ramp_s", ramp_s))])
@@ -144,6 +168,7 @@ class Control:
     # --- reading -----------------------------------------------------------------------------------
 
     @property
+    @_one_at_a_time
     def filters(self) -> tuple[Filter, ...]:
         """The filters now in force, in order."""
         return tuple(self._filters.values())
@@ -164,12 +189,14 @@ class Control:
         return bus_limit_db(self.longest_decay_s, self.preset.ceiling_db)
 
     @property
+    @_one_at_a_time
     def longest_decay_s(self) -> float:
         """Longest decay [s] among enabled resonators; 0 when there is none."""
         sounding = [name for name, one in self._filters.items() if one.kind == "resonator" and one.enabled]
         rates = [self._sections[name].decay_rate for name in sounding]
         return decay_from_radius(float(np.exp(-min(rates))), self.rate_hz) if rates else 0.0
 
+    @_one_at_a_time
     def sos(self, channel: int = 0) -> np.ndarray:
         """Static second-order sections of the notch chain on one channel, scipy order b0 b1 b2 1 a1 a2.
 
@@ -184,10 +211,12 @@ class Control:
                 rows.append([b0, b1, b2, 1.0, a1, a2])
         return np.array(rows).reshape(-1, 6)
 
+    @_one_at_a_time
     def meters(self) -> dict:
         """Levels and safety activity; see ``reports.read_meters``."""
         return reports.read_meters(self.memory, self.bus_limit_db)
 
+    @_one_at_a_time
     def events(self) -> list[dict]:
         """What happened since the start, oldest first: dicts with frame, kind, channel, centre_hz, depth_db and why."""
         fresh, self._events_read = reports.read_events(self.memory, self._events_read)
@@ -267,7 +296,7 @@ class _FreeLanes:
         most = limits.NOTCHES_MAX if kind == "notch" else limits.RESONATORS_MAX
         if self._in_force[kind] == most:
             raise ParameterError(f"filters must hold at most {most} of kind {kind}, got one more: remove some first")
-        while self._fading and self._fading[0][0] < frame:
+        while self._fading and self._fading[0][0] <= frame:
             _, lane, its_mask = heapq.heappop(self._fading)
             self._put(lane, its_mask)
         free = self._notches if kind == "notch" else self._resonators.setdefault(mask, [])

@@ -25,7 +25,7 @@ from liveres.kernels import callback as c
 from liveres.kernels import state as s
 
 LOST_S = 1.0
-# without a callback for so long, and for ten blocks at least, a device counts as gone
+# without a callback for so long, and for two blocks at least, a device counts as gone
 LATE_S = 0.1
 # a command waits for the next callback; this long and two blocks is late even for a system that hiccups
 WATCH_S = 0.1
@@ -33,6 +33,9 @@ CLOSE_S = 2.0
 # PortAudio can wait ten minutes for a sound server that has died
 REALTIME_PRIORITY = 20
 # above ordinary work, below what the kernel and a sound server use (commonly 50 and up)
+
+
+_NEVER_FREED: list[Live] = []
 
 
 class Live(Control):
@@ -57,16 +60,16 @@ class Live(Control):
         realtime: bool = True,
     ):
         self._running = False
-        self._steering = threading.RLock()
         self.block_frames = limits.check_whole("block_frames", block_frames, limits.BLOCK_FRAMES)
         self.device = device
         super().__init__(preset, rate_hz, channels)
         self._late_frames = round(LATE_S * self.rate_hz) + 2 * self.block_frames
         self._ask_realtime = realtime
         self._realtime = (False, "the stream is not running")
-        self._journal: list[tuple[int, str, dict, float]] = []
+        self._journal: list[tuple[int, int | None, str, dict, float]] = []
         self._lost: str | None = None
         self._stream = None
+        self._started = False
         self._mailbox = Mailbox()
         self._stats = np.zeros(1, c.STATS)
         self._x = np.zeros((s.CHUNK, self.channels))
@@ -77,10 +80,13 @@ class Live(Control):
     # --- running ---------------------------------------------------------------------------------
 
     def start(self) -> None:
-        """Open the device and start the sound, muted.
+        """Open the device and start the sound, muted unless ``unmute`` came first. Once only: a Live is not used again.
 
-        Raises : DeviceError - the device is missing or refuses
+        Raises : DeviceError - the device is missing or refuses; it has been started before
         """
+        if self._started:
+            raise DeviceError("a Live must be started once, got a second start: make a new one")
+        self._started = True
         sd = import_sounddevice()
         check_device(self.device, self.channels)
         try:
@@ -129,6 +135,8 @@ class Live(Control):
         closing.start()
         closing.join(CLOSE_S)
         if closing.is_alive():
+            # the sound system may yet call back, so the memory must outlive this object
+            _NEVER_FREED.append(self)
             # leaving the interpreter would wait for the same dead server
             atexit.unregister(import_sounddevice()._exit_handler)
             return False
@@ -159,14 +167,18 @@ class Live(Control):
         """As ``Control.retune``; noted for ``moves``."""
         with self._steering:
             super().retune(name, ramp_s=ramp_s, **changes)
-            self._journal.append((self._sequence, name, changes, ramp_s))
+            acted = None if self._running else self.frame
+            self._journal.append((self._sequence, acted, name, changes, ramp_s))
 
     def moves(self) -> tuple[Move, ...]:
-        """Every retune so far with the exact frame it acted on; those still on their way are left out."""
+        """Every retune so far with the exact frame it acted on; those still on their way are left out.
+
+        Filters added or removed while it runs, mutes and resets are not among them: moves files know retunes only.
+        """
         done = []
         with self._steering:
-            for sequence, name, changes, ramp_s in self._journal:
-                frame = self._mailbox.frame_of(sequence)
+            for sequence, acted, name, changes, ramp_s in self._journal:
+                frame = self._mailbox.frame_of(sequence) if acted is None else acted
                 if frame is not None:
                     done += [Move(frame, name, key, value, ramp_s) for key, value in changes.items()]
         return tuple(done)
@@ -240,7 +252,7 @@ class Live(Control):
 
     def _watch(self) -> None:
         """Notice that the device has gone: callbacks stop coming, or the stream says it is over."""
-        still_s = max(LOST_S, 10 * self.block_frames / self.rate_hz)
+        still_s = max(LOST_S, 2 * self.block_frames / self.rate_hz)
         calls, since = -1, time.monotonic()
         while self._running and self._lost is None:
             stream = self._stream

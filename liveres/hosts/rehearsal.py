@@ -9,8 +9,6 @@ Thread: any one may call ``advance`` while another steers.
 
 from __future__ import annotations
 
-import threading
-
 import numpy as np
 
 from liveres import limits
@@ -56,7 +54,6 @@ class Rehearsal(Control):
         rate_hz: float = 48_000,
         seed: int = 0,
     ):
-        self._steering = threading.RLock()
         gain_db = SYSTEM_GAIN_DB.check("gain_db", gain_db)
         self.delay_frames = limits.check_whole("delay_frames", delay_frames, DELAY_FRAMES)
         seed = limits.check_whole("seed", seed, SEED)

@@ -5,15 +5,18 @@ compile everything they are passed to once more. No fastmath: sums keep their or
 
 Cache: a per-user folder named by a hash of every kernel source, because Numba notices a change in a function's
 own file only, and would go on running old code when a helper in another file changed. Where that folder cannot
-be written a temporary one is used. NUMBA_CACHE_DIR, when set, is respected.
+be written a temporary one serves, for one process. NUMBA_CACHE_DIR, when set, is respected.
 """
 
 from __future__ import annotations
 
+import atexit
 import contextlib
+import functools
 import hashlib
 import os
 import platform
+import shutil
 import sys
 import tempfile
 from collections.abc import Callable, Iterator
@@ -36,12 +39,17 @@ HAS_CLOCK = sys.platform in ("linux", "darwin")
 _CLOCK_MONOTONIC = 6 if sys.platform == "darwin" else 1
 
 
+_FROZEN = ("limits.py", "theory/poles.py", "theory/true_peak.py")
+# other sources whose constants are compiled in
+
+
 def cache_dir() -> Path:
     """Folder of the compile cache for exactly these kernel sources."""
     if os.environ.get("NUMBA_CACHE_DIR"):
         return Path(os.environ["NUMBA_CACHE_DIR"])
     digest = hashlib.sha256()
-    for source in sorted(Path(__file__).parent.glob("*.py")):
+    package = Path(__file__).parents[1]
+    for source in (*sorted(package.glob("kernels/*.py")), *(package / name for name in _FROZEN)):
         digest.update(source.read_bytes())
     home = os.environ.get("XDG_CACHE_HOME") or Path.home() / ".cache"
     folder = Path(home) / "liveres" / f"kernels-{digest.hexdigest()[:16]}"
@@ -49,7 +57,15 @@ def cache_dir() -> Path:
         folder.mkdir(parents=True, exist_ok=True)
     if os.access(folder, os.W_OK):
         return folder
-    return Path(tempfile.gettempdir()) / f"liveres-{os.getuid() if hasattr(os, 'getuid') else 'user'}-{folder.name}"
+    # for this process alone: a name that others can guess would let them leave compiled code there for us
+    return _temporary_folder()
+
+
+@functools.cache
+def _temporary_folder() -> Path:
+    folder = tempfile.mkdtemp(prefix="liveres-")
+    atexit.register(shutil.rmtree, folder, ignore_errors=True)
+    return Path(folder)
 
 
 def cache_is_cold(function: str = "block.advance") -> bool:

@@ -69,14 +69,11 @@ def _run_notches(state, groups, lanes, masks, ringing, history, signal, count):
 
 @inner
 def _run_bank(state, groups, lanes, ringing, feed, sums, count):
-    # True when any resonator sounded
-    sounded = False
     for g in range(s.NOTCH_GROUPS, state[0].groups_used):
         position = int64(0)
         while position < count and (groups[g].moving or groups[g].awake):
             frames = _stretch(groups, lanes, ringing, g, state[0].frame, position, count)
             stop = position + frames
-            sounded = True
             for c in range(ringing.shape[1]):
                 if groups[g].channels >> c & 1:
                     if groups[g].moving:
@@ -85,7 +82,6 @@ def _run_bank(state, groups, lanes, ringing, feed, sums, count):
                         section.advance_bank_still(lanes, ringing, g, c, feed, sums, position, stop)
             _advance_group(groups, g, frames)
             position = stop
-    return sounded
 
 
 @inner
@@ -140,9 +136,11 @@ def advance_block(
             _make_feed(channels, c, signal, feed, count)
             for i in range(count * LANES):
                 sums[c, i] = 0.0
-        sounded = _run_bank(state, groups, lanes, ringing, feed, sums, count)
+        _run_bank(state, groups, lanes, ringing, feed, sums, count)
+        # once there has been a resonator the bus is mixed in also while all sleep: its limiter goes on recovering
+        has_bus = state[0].groups_used > s.NOTCH_GROUPS
         for c in range(channels.shape[0]):
-            if sounded:
+            if has_bus:
                 _gather(c, sums, bus, count)
                 safety.mix_bus(state, channels, c, bus, signal, slow, count)
             elif state[0].dry_gain != 1.0:

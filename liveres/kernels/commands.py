@@ -51,9 +51,14 @@ def _place(state, groups, lanes, masks, ringing, history, g, k, mask):
 def clear_lane(ringing, history, g, k):
     """Forget what a lane has heard."""
     for c in range(ringing.shape[1]):
-        ringing[g, c, k] = ringing[g, c, LANES + k] = 0.0
-        if g < s.NOTCH_GROUPS:
-            history[g, c, k] = history[g, c, LANES + k] = 0.0
+        _clear_one(ringing, history, g, k, c)
+
+
+@inner
+def _clear_one(ringing, history, g, k, c):
+    ringing[g, c, k] = ringing[g, c, LANES + k] = 0.0
+    if g < s.NOTCH_GROUPS:
+        history[g, c, k] = history[g, c, LANES + k] = 0.0
 
 
 @inner
@@ -121,7 +126,5 @@ def clear_channel(state, channels, ringing, history, c):
     """Clear one channel's delay registers, after a fault in it."""
     for g in range(state[0].groups_used):
         for k in range(LANES):
-            ringing[g, c, k] = ringing[g, c, LANES + k] = 0.0
-            if g < s.NOTCH_GROUPS:
-                history[g, c, k] = history[g, c, LANES + k] = 0.0
+            _clear_one(ringing, history, g, k, c)
     channels[c].x1 = channels[c].x2 = 0.0

@@ -15,9 +15,8 @@ unit gain. Thread: audio.
 
 from __future__ import annotations
 
-import numpy as np
-
 from liveres.kernels._jit import inner
+from liveres.theory.true_peak import PHASES
 
 ONE = 1 << 30
 TAPS = 12
@@ -25,15 +24,6 @@ TAPS = 12
 LEAST_FRAMES = TAPS + 4
 # shorter leaves the smoothers no room
 
-_PHASE_0 = (
-    0.001708984375, 0.010986328125, -0.0196533203125, 0.033203125, -0.0594482421875, 0.1373291015625,
-    0.97216796875, -0.102294921875, 0.047607421875, -0.026611328125, 0.014892578125, -0.00830078125,
-)  # fmt: skip
-_PHASE_1 = (
-    -0.0291748046875, 0.029296875, -0.0517578125, 0.089111328125, -0.16650390625, 0.465087890625,
-    0.77978515625, -0.2003173828125, 0.1015625, -0.0582275390625, 0.033081054688, -0.018920898438,
-)  # fmt: skip
-PHASES = np.array([_PHASE_0, _PHASE_1, _PHASE_1[::-1], _PHASE_0[::-1]])
 _PEAK_MARGIN = 10.0 ** (-0.05 / 20.0)
 # half of the 0.1 dB allowed, for a gain that moves within the interpolator's reach
 
@@ -80,15 +70,16 @@ def _true_peak(look, c, here, size):
 
 @inner
 def _sliding_least(channels, c, look, marks, need, frame, size):
-    # queue of rising gains, oldest first; whatever a newer, smaller one makes pointless is dropped
+    # queue of rising gains, oldest first; the outdated go first, so that there is always room for one more, then
+    # whatever a newer, smaller one makes pointless
     head, tail = channels[c].look_head, channels[c].look_tail
+    while head < tail and marks[c, SINCE, head % size] <= frame - size:
+        head += 1
     while tail > head and look[c, NEEDED, (tail - 1) % size] >= need:
         tail -= 1
     look[c, NEEDED, tail % size] = need
     marks[c, SINCE, tail % size] = frame
     tail += 1
-    while marks[c, SINCE, head % size] <= frame - size:
-        head += 1
     channels[c].look_head, channels[c].look_tail = head, tail
     return look[c, NEEDED, head % size]
 

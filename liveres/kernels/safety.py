@@ -121,7 +121,7 @@ def _trap(state, channels, c, signal, count, events):
         if not abs(v) <= STATE_MAX:
             if channels[c].trap_left == 0:
                 channels[c].state_traps += 1
-                log(state, events, state[0].frame + n, s.TRAP_EVENT, c, 0.0)
+                log(state, events, state[0].frame + n, s.TRAP_EVENT, c)
                 channels[c].trap_left = 2 * state[0].trap_frames
             v = 0.0
         if channels[c].trap_left > 0:
@@ -197,16 +197,15 @@ def _judge_window(state, channels, c, frame, events):
     channels[c].guard_left = state[0].guard_window
     if channels[c].guard_count >= GUARD_WINDOWS:
         if channels[c].guard_rest == 0:
-            log(state, events, frame, s.GUARD_EVENT, c, 0.0)
+            log(state, events, frame, s.GUARD_EVENT, c)
         channels[c].guard_rest = state[0].guard_hold
 
 
 @inner
-def log(state, events, frame, kind, c, value):
+def log(state, events, frame, kind, c):
     """Write an event into the ring; the newest EVENTS of them can be read."""
     place = state[0].event_count % s.EVENTS
     events[place, s.EVENT_FRAME] = frame
     events[place, s.EVENT_KIND] = kind
     events[place, s.EVENT_CHANNEL] = c
-    events[place, s.EVENT_VALUE] = value
     state[0].event_count += 1

@@ -68,8 +68,8 @@ NOW, STEP, END, LEFT = 0, 1, 2, 3
 
 # --- events -----------------------------------------------------------------------------------
 EVENTS = 1024
-EVENT_FRAME, EVENT_KIND, EVENT_CHANNEL, EVENT_VALUE = 0, 1, 2, 3
-EVENT_FIELDS = 4
+EVENT_FRAME, EVENT_KIND, EVENT_CHANNEL = 0, 1, 2
+EVENT_FIELDS = 3
 EVENT_KINDS = ("guard", "trap")
 GUARD_EVENT, TRAP_EVENT = 0, 1
 

@@ -16,7 +16,7 @@ MODULES = sorted((ROOT / "liveres").rglob("*.py"))
 
 @pytest.mark.parametrize("path", MODULES, ids=lambda path: str(path.relative_to(ROOT)))
 def test_a_module_is_short_and_says_what_it_is(path):
-    """Four hundred lines a file and sixty a function are what a reader holds in mind."""
+    """Four hundred lines a file, and sixty a function besides a long docstring, are what a reader holds in mind."""
     text = path.read_text()
     assert len(text.splitlines()) <= 400
     tree = ast.parse(text)

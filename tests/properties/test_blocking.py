@@ -111,3 +111,22 @@ def test_a_state_fault_is_cleared_at_the_same_frame_for_any_blocks(seed):
         results.append(np.concatenate(out).tobytes())
         assert p.meters()["traps"]["state"] == 2
     assert results[0] == results[1]
+
+
+def test_a_bank_that_falls_asleep_while_its_limiter_works_leaves_no_trace_of_the_blocks():
+    """The bus limiter goes on recovering while nothing rings, wherever a block ends."""
+    x = (0.9 * np.sin(2 * np.pi * 440 * np.arange(30_000) / 48_000))[:, None].astype(np.float32)
+    moves = {9003: {"enabled": False, "ramp_s": 0.0205}, 9995: {"enabled": True, "ramp_s": 0.02}}
+    results = set()
+    for block_frames in (1, 64, 1000):
+        p = Processor(Preset([Resonator("r", 440, 24, decay_s=0.05)], dry_db=-12, ceiling_db=-20), channels=1)
+        out, position = [], 0
+        while position < len(x):
+            if position in moves:
+                p.retune("r", **moves[position])
+            stop = min([position + block_frames, len(x), *(frame for frame in moves if frame > position)])
+            out.append(p.process(x[position:stop]))
+            position = stop
+        assert p.meters()["bus_limiter_most_db"] < -10
+        results.add(np.concatenate(out).tobytes())
+    assert len(results) == 1

@@ -241,3 +241,12 @@ def test_mute_is_silent_in_five_milliseconds_and_unmute_fades_in_over_a_second()
     y = p.process(x)[:, 0]
     assert (np.diff(y[:RATE_HZ]) > 0).all()
     assert y[RATE_HZ - 1] == 0.5 and (y[RATE_HZ:] == 0.5).all()
+
+
+def test_the_look_aheads_queue_never_outgrows_its_ring():
+    """A slowly falling signal needs a rising gain at every frame: the longest queue there can be."""
+    p = Processor(Preset(ceiling_db=-20, lookahead_s=0.005, guard=False), channels=1)
+    y = p.process(8 * np.exp(-np.arange(4 * RATE_HZ) / (1.7 * RATE_HZ))[:, None])
+    assert_safe(y, 0.1)
+    queued = p.memory.channels["look_tail"] - p.memory.channels["look_head"]
+    assert queued.max() <= p.latency_frames + 1

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import os
+import signal
 import subprocess
 import sys
 import time
@@ -97,6 +98,39 @@ def test_real_time_scheduling_is_asked_for_and_reported_as_it_is(jack_server, as
         assert (said["realtime"], said["realtime_why"]) == (False, "not asked for")
     else:
         assert said["realtime_why"].startswith("granted" if said["realtime"] else "the system refused it")
+
+
+STOPPED = """
+import gc, os, signal, sys, weakref
+from liveres import DeviceError, Live, Preset
+live = Live(Preset(), "system", 1024)
+live.start()
+try:
+    live.start()
+except DeviceError as error:
+    print(error)
+os.kill(int(sys.argv[1]), signal.SIGSTOP)
+print(live.close())
+lanes = weakref.ref(live.memory.lanes)
+del live
+gc.collect()
+print(lanes() is not None)
+"""
+
+
+def test_memory_outlives_a_stream_that_would_not_close_and_nothing_starts_twice(jack_server):
+    """A server that hangs may call back later; freed memory would then be written to. The program still ends."""
+    pid = jack_server._process.pid
+    try:
+        ended = subprocess.run(
+            [sys.executable, "-c", STOPPED, str(pid)],
+            env=jack_server.environment, capture_output=True, text=True, timeout=60,
+        )  # fmt: skip
+    finally:
+        os.kill(pid, signal.SIGCONT)
+    assert ended.returncode == 0, ended.stderr
+    said = [line for line in ended.stdout.splitlines() if line]
+    assert said == ["a Live must be started once, got a second start: make a new one", "False", "True"]
 
 
 SESSION = """

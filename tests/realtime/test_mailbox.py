@@ -132,3 +132,44 @@ def test_a_stopped_audio_thread_is_said_when_its_mailbox_is_full(monkeypatch):
     box.send(rows)
     with pytest.raises(DeviceError, match="the audio thread must take its commands, 40000 are waiting"):
         box.send(rows[:1])
+
+
+def test_a_mute_is_not_lost_beside_another_thread_that_steers():
+    """The mute key works even when something else is busy adding and removing filters."""
+    usual_s = sys.getswitchinterval()
+    sys.setswitchinterval(1e-6)
+    try:
+        for _ in range(40):
+            live = HandDriven(Preset(guard=False))
+            live.unmute(ramp_s=0)
+            live.drive(np.full((64, 2), 0.5))
+
+            def fuss(live=live) -> None:
+                for k in range(30):
+                    live.add(Notch(f"n{k}", 1000, -3, q=5))
+                    live.meters()
+                    live.remove(f"n{k}")
+
+            other = threading.Thread(target=fuss)
+            other.start()
+            live.mute()
+            while other.is_alive():
+                live.drive(np.full((64, 2), 0.5))
+            other.join()
+            for _ in range(10):
+                last = live.drive(np.full((64, 2), 0.5))
+            assert not last.any()
+    finally:
+        sys.setswitchinterval(usual_s)
+
+
+def test_a_retune_before_the_start_is_noted_at_frame_0():
+    """Moves of a session must say when each acted, those made while it was being set up as well."""
+    live = HandDriven(Preset([Notch("n", 1000, -12, q=10)]))
+    live._running = False
+    live.retune("n", centre_hz=1100.0)
+    live._running = True
+    live.drive(None)
+    live.retune("n", centre_hz=1200.0)
+    live.drive(None)
+    assert [(move.frame, move.value) for move in live.moves()] == [(0, 1100.0), (64, 1200.0)]

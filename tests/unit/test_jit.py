@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import os
+
 import numba
 import numpy as np
 import pytest
@@ -25,12 +27,27 @@ def test_the_folder_is_the_users_and_named_by_the_sources(monkeypatch, tmp_path)
     assert folder == _jit.cache_dir()
 
 
+def test_a_constant_from_another_floor_names_another_folder(monkeypatch, tmp_path):
+    """Bounds of the safety stage are compiled in: changing one must not leave the old one at work."""
+    for source in ("kernels/_jit.py", "limits.py", "theory/poles.py", "theory/true_peak.py"):
+        (tmp_path / source).parent.mkdir(parents=True, exist_ok=True)
+        (tmp_path / source).write_text("a = 1\n")
+    monkeypatch.delenv("NUMBA_CACHE_DIR", raising=False)
+    monkeypatch.setenv("XDG_CACHE_HOME", str(tmp_path))
+    monkeypatch.setattr(_jit, "__file__", str(tmp_path / "kernels/_jit.py"))
+    before = _jit.cache_dir()
+    (tmp_path / "limits.py").write_text("a = 2\n")
+    assert _jit.cache_dir() != before
+
+
 def test_where_the_users_folder_cannot_be_written_a_temporary_one_serves(monkeypatch):
     """Numba would refuse to import; a read-only home is common on kiosks and in containers."""
     monkeypatch.delenv("NUMBA_CACHE_DIR", raising=False)
     monkeypatch.setenv("XDG_CACHE_HOME", "/proc/nowhere")
     folder = _jit.cache_dir()
     assert folder.name.startswith("liveres-") and "proc" not in str(folder)
+    # nobody else may leave compiled code there for us to run
+    assert folder.stat().st_mode & 0o077 == 0 and folder.stat().st_uid == os.getuid()
 
 
 def test_numbas_own_setting_is_put_back():
