@@ -12,6 +12,7 @@ import argparse
 import contextlib
 import importlib
 import os
+import re
 import signal
 import sys
 import threading
@@ -126,7 +127,7 @@ class _Parser(argparse.ArgumentParser):
         return f"{self.about}\n{super().format_help()}"
 
     def add_argument(self, *names: str, **keywords: object) -> argparse.Action:
-        self.options += [name for name in names if name.startswith("--")]
+        self.options += [name for name in names if name.startswith("-")]
         return super().add_argument(*names, **keywords)
 
     def check_options(self, words: list[str]) -> None:
@@ -135,11 +136,16 @@ class _Parser(argparse.ArgumentParser):
             if word == "--":
                 return
             option = word.split("=", 1)[0]
-            if option.startswith("--") and option not in self.options:
-                raise UsageError(f"{self.prog} has no option {option}: {nearest(option, self.options)}")
+            long = [name for name in self.options if name.startswith("--")]
+            if option.startswith("--") and option not in long:
+                raise UsageError(f"{self.prog} has no option {option}: {nearest(option, long)}")
+            # one letter, whose value may follow at once: -oDIR; -3 is a number
+            if re.match(r"-[^-\d.]", word) and word[:2] not in self.options:
+                raise UsageError(f"{self.prog} has no option {word[:2]}: see {self.prog} --help")
 
     def error(self, message: str) -> NoReturn:
         message = message.removeprefix("argument ").replace("the following arguments are required:", f"{self.prog} needs")
+        message = message.replace("unrecognized arguments:", f"{self.prog} has no use for")
         raise UsageError(f"{message}: see {self.prog} --help")
 
 
@@ -193,7 +199,7 @@ def _fill_live(parser: _Parser) -> None:
     _add_number(parser, "--rate", limits.RATE_HZ, 48_000, "sample rate of the device")
     _add_number(parser, "--channels", limits.CHANNELS, 2, "channels in and out", whole=True)
     _add_number(parser, "--seconds", limits.RUN_S, None, "stop by itself after so long")
-    parser.add_argument("--no-screen", action="store_true", help="lines of text in place of the screen")
+    parser.add_argument("--no-screen", action="store_true", help="meters as lines of text, which is all there is so far")
     _add_json(parser)
 
 
@@ -253,14 +259,15 @@ def parse(words: list[str]) -> argparse.Namespace:
     name = words[0]
     if name in commands:
         commands[name].check_options(words[1:])
-    elif name.startswith("-"):
+        # files may stand before, between and after the options; not even an option does after --
+        read = commands[name].parse_args if "--" in words else commands[name].parse_intermixed_args
+        return read(words[1:], argparse.Namespace(command=name))
+    if name.startswith("-"):
         top.check_options(words)
-    else:
+        top.parse_args(words)
+    elif name.strip():
         raise UsageError(f"there is no command {name}: {nearest(name, commands)}")
-    args = top.parse_args(words)
-    if args.command is None:
-        raise UsageError(f"a command must be given, got none: {nearest('', commands)}")
-    return args
+    raise UsageError(f"a command must be given, got none: {nearest('', commands)}")
 
 
 def main(words: list[str] | None = None) -> int:

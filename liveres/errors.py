@@ -13,6 +13,7 @@ no blame, no full stop.
 
 from __future__ import annotations
 
+import datetime
 import difflib
 from collections.abc import Iterable
 from dataclasses import dataclass
@@ -68,6 +69,24 @@ class FileError(LiveresError, ValueError):
 
 _LIST_MOST = 32
 # longer lists are not read
+_TOLD_MOST = 60
+# characters of a value: enough to know it again
+
+
+def told(value: object) -> str:
+    """A value as messages show it: in the words of a file where Python's would be strange there, cut when long.
+
+    >>> told(True), told({"q": 3}), told("x")
+    ('true', 'a table', "'x'")
+    """
+    if isinstance(value, bool):
+        return "true" if value else "false"
+    if isinstance(value, dict):
+        return "a table"
+    if isinstance(value, list) and any(isinstance(one, dict) for one in value):
+        return "a list of tables"
+    text = str(value) if isinstance(value, datetime.date | datetime.time) else repr(value)
+    return text if len(text) <= _TOLD_MOST else f"{text[: _TOLD_MOST - 3]}..."
 
 
 def nearest(word: str, known: Iterable[str]) -> str:

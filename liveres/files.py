@@ -27,15 +27,25 @@ _REASONS = {
 }
 
 
-def read_text(path: str | os.PathLike[str]) -> str:
+def read_text(path: str | os.PathLike[str], most_bytes: int) -> str:
     """The text of a UTF-8 file, a leading byte-order mark dropped, line ends as they stand.
 
-    Raises : FileError - the file is missing, a folder, unreadable, empty, or not UTF-8
+    most_bytes : no more than this is ever read
+    Raises : FileError - the file is missing, a folder, a device or pipe, unreadable, too large, empty, or not UTF-8
     """
     try:
-        data = Path(path).read_bytes()
+        mode = os.stat(path).st_mode
+        if not (stat.S_ISREG(mode) or stat.S_ISDIR(mode)):
+            # before it is opened: a pipe may never answer
+            message = "it must be an ordinary file, got a device or pipe: save the text in a file first"
+            raise FileError(path, [Fault("", message)])
+        with open(path, "rb") as file:
+            data = file.read(most_bytes + 1)
     except OSError as error:
         raise FileError(path, [Fault("", _unreadable(error))]) from None
+    if len(data) > most_bytes:
+        message = f"file must be at most {most_bytes / 2**20:g} MB, got a larger one: choose the right file"
+        raise FileError(path, [Fault("", message)])
     try:
         text = data.decode("utf-8-sig")
     except UnicodeDecodeError as error:
@@ -59,10 +69,23 @@ def _unreadable(error: OSError) -> str:
     if isinstance(error, FileNotFoundError | NotADirectoryError):
         return "file must exist, got none: check the name and the folder"
     if isinstance(error, IsADirectoryError):
-        return "file must be a file, got a folder: name a file inside it"
+        return "it must be a file, got a folder: name a file inside it"
     if isinstance(error, PermissionError):
         return "file must be readable, and permission was refused: change its permissions"
     return f"file cannot be read ({error.strerror}): check the disk"
+
+
+def make_folder(path: str | os.PathLike[str]) -> None:
+    """Make a folder and those above it, where they are missing.
+
+    Raises : WriteError - a file is in the way; the folder above refuses; the disk is read-only or full
+    """
+    try:
+        os.makedirs(path, exist_ok=True)
+    except (FileExistsError, NotADirectoryError):
+        raise WriteError(f"{path}: it must be a folder, and a file is in its way: choose another name") from None
+    except OSError as error:
+        raise WriteError(f"{path}: {_unwritable(error, Path(os.path.realpath(error.filename)).parent)}") from error
 
 
 @contextmanager
@@ -79,7 +102,7 @@ def atomic_target(path: str | os.PathLike[str]) -> Iterator[Path]:
     """
     target = Path(os.path.realpath(path))
     mode = _check_target(path, target)
-    temporary = target.with_name(f".{secrets.token_hex(8)}{target.suffix}")
+    temporary = target.with_name(f"{temporary_prefix(os.getpid())}{secrets.token_hex(8)}{target.suffix}")
     made = False
     try:
         os.close(os.open(temporary, os.O_CREAT | os.O_EXCL | os.O_WRONLY, 0o666))
@@ -103,6 +126,11 @@ def atomic_target(path: str | os.PathLike[str]) -> Iterator[Path]:
         _flush(target.parent)
 
 
+def temporary_prefix(process: int) -> str:
+    """What the temporary names of a process begin with, so that those of one that was killed can be told."""
+    return f".{process}-"
+
+
 def _check_target(path: object, target: Path) -> int | None:
     """Permission bits of an existing target, None where there is none; WriteError where it must not be replaced."""
     try:
@@ -115,8 +143,15 @@ def _check_target(path: object, target: Path) -> int | None:
         raise WriteError(f"{path}: target must be a file, got a folder: name a file inside it")
     if not stat.S_ISREG(mode):
         raise WriteError(f"{path}: target must be an ordinary file, got a device or pipe: choose another name")
-    if not os.access(target, os.W_OK):
-        raise WriteError(f"{path}: target must be writable, got a protected one: change its permissions or choose another name")
+    try:
+        # opened and left as it is, because the system gives its reason only then
+        os.close(os.open(target, os.O_WRONLY))
+    except PermissionError:
+        raise WriteError(
+            f"{path}: target must be writable, got a protected one: change its permissions or choose another name"
+        ) from None
+    except OSError as error:
+        raise WriteError(f"{path}: {_unwritable(error, target.parent)}") from error
     return stat.S_IMODE(mode)
 
 
@@ -129,6 +164,9 @@ def _flush(path: Path) -> None:
 
 
 def _unwritable(error: OSError, folder: Path) -> str:
+    if isinstance(error, FileNotFoundError) and folder.is_dir():
+        # so say folders that only show what the system knows, such as /proc
+        return f"folder {folder} must take new files, and takes none: choose another place"
     if isinstance(error, FileNotFoundError | NotADirectoryError):
         return f"folder {folder} must exist, got none: make it or choose another place"
     if isinstance(error, PermissionError):

@@ -9,7 +9,7 @@ import math
 from dataclasses import dataclass
 from numbers import Real
 
-from liveres.errors import ParameterError
+from liveres.errors import ParameterError, told
 
 
 @dataclass(frozen=True)
@@ -47,7 +47,8 @@ class Bound:
 def check_number(name: str, value: object) -> float:
     """The value as a float; ParameterError for a boolean, a string or any other that is no real number."""
     if isinstance(value, bool) or not isinstance(value, Real):
-        raise ParameterError(f"{name} must be a number, got {value!r}: write it without quotes")
+        remedy = "write it without quotes" if isinstance(value, str) else "write a number"
+        raise ParameterError(f"{name} must be a number, got {told(value)}: {remedy}")
     try:
         return float(value)
     except OverflowError:
@@ -65,7 +66,7 @@ def check_whole(name: str, value: object, bound: Bound) -> int:
 def check_flag(name: str, value: object) -> bool:
     """The value if it is true or false; ParameterError otherwise."""
     if not isinstance(value, bool):
-        raise ParameterError(f"{name} must be true or false, got {value!r}: write true or false")
+        raise ParameterError(f"{name} must be true or false, got {told(value)}: write true or false")
     return value
 
 
@@ -115,6 +116,14 @@ RESONATORS_MAX = 16_384
 WATCH_NOTCHES = Bound(1, NOTCHES_MAX, "", "8 to 24 is usual")
 WATCH_DEEPEST_DB = Bound(-60, -3, "dB", "-12 to -24 is usual")
 # less than 3 dB would not hold a loop, more than 60 no microphone is quiet enough to need
+
+# --- files ------------------------------------------------------------------------------------
+
+PRESET_BYTES = 16 * 2**20
+# RESONATORS_MAX filters with every key and names of a line each take 6 MB; what is larger is no preset
+
+MOVES_BYTES = 64 * 2**20
+# two million moves: three hours of a fader that sends two hundred a second
 
 # --- motion -----------------------------------------------------------------------------------
 
@@ -181,8 +190,8 @@ def check_centre(name: str, centre_hz: object, rate_hz: float) -> float:
     top = CENTRE_RATE_PART * rate_hz
     if CENTRE_HZ.low <= number <= top:
         return number
+    remedy = "raise it" if number < CENTRE_HZ.low else "lower it or raise the sample rate"
     raise ParameterError(
         f"{name} must be from {CENTRE_HZ.low:g} to {top:.12g} Hz ({CENTRE_RATE_PART:g} of rate_hz "
-        f"{rate_hz:.12g}), got {number:.12g}: "
-        + ("raise it" if number < CENTRE_HZ.low else "lower it or raise the sample rate")
+        f"{rate_hz:.12g}), got {number:.12g}: {'write a number' if math.isnan(number) else remedy}"
     )

@@ -10,9 +10,9 @@ from __future__ import annotations
 
 import json
 import os
-import re
 import tomllib
 from dataclasses import asdict
+from functools import partial
 from typing import TYPE_CHECKING
 
 from liveres import limits
@@ -30,9 +30,9 @@ from liveres.engine.settings import (
     repeated_names,
 )
 from liveres.engine.watch import WATCH_CHECKS, Watch
-from liveres.errors import Fault, FileError, ParameterError, nearest
+from liveres.errors import Fault, FileError, ParameterError, nearest, told
 from liveres.files import atomic_target, number_text, read_text
-from liveres.toml_lines import Place, dotted, line_of, value_lines
+from liveres.toml_lines import Place, dotted, line_of, syntax_fault, value_lines
 
 if TYPE_CHECKING:
     from tomlkit import TOMLDocument
@@ -44,6 +44,9 @@ _FILTER_KEYS = {
     for kind, made in KINDS.items()
 }
 # in the order they are written
+_TABLES = ("filters", "watch")
+_UNOFFERED = ("origin",)
+# legal, but the program's own note of who put a filter there
 _KIND_CHECKS = {kind: {key: FILTER_CHECKS[key] for key in keys} for kind, keys in _FILTER_KEYS.items()}
 _DEFAULTS = {key: getattr(Preset, key) for key in _TOP_KEYS}
 _FILTER_DEFAULTS = {"normalise": "peak", "channels": None, "enabled": True, "origin": "preset"}
@@ -56,13 +59,13 @@ _FILTER_DEFAULTS = {"normalise": "peak", "channels": None, "enabled": True, "ori
 def load_preset(path: str | os.PathLike[str]) -> Preset:
     """The preset in a TOML file; every fault of the file is reported at once.
 
-    path : the file; UTF-8, at most 128 notches and 16,384 resonators
+    path : the file; UTF-8, at most 16 MB with at most 128 notches and 16,384 resonators
     Returns : Preset; fields the file leaves out have their defaults, rate_hz 48000 among them
-    Raises : FileError - no such file, a folder, unreadable, empty or not UTF-8; not TOML; an unknown or missing
-        key; a value of the wrong type, outside its range or illegal at rate_hz; no width or several; a name twice;
-        too many filters
+    Raises : FileError - no such file, a folder or device, unreadable, too large, empty or not UTF-8; not TOML; an
+        unknown or missing key; a value of the wrong type, outside its range or illegal at rate_hz; no width or several; a
+        name twice; too many filters
     """
-    return _read_preset(path, read_text(path))
+    return _read_preset(path, read_text(path, limits.PRESET_BYTES))
 
 
 def _read_preset(path: object, text: str) -> Preset:
@@ -70,7 +73,7 @@ def _read_preset(path: object, text: str) -> Preset:
     faults: list[tuple[Place, str]] = []
     filters = data.pop("filters", [])
     watch = _read_watch(data.pop("watch", None), faults)
-    values = _take(data, {key: PRESET_CHECKS[key] for key in _TOP_KEYS}, "a preset", (), faults)
+    values = _take(data, {key: PRESET_CHECKS[key] for key in _TOP_KEYS}, "a preset", (), faults, _TABLES)
     rate_hz = values.get("rate_hz", None if "rate_hz" in data else Preset.rate_hz)
     made = _read_filters(filters, rate_hz, faults)
     if faults:
@@ -85,9 +88,7 @@ def _parse(path: object, text: str) -> dict[str, object]:
     except RecursionError:
         raise FileError(path, [Fault("", "file must be TOML, got brackets nested too deeply: write it flatter")]) from None
     except ValueError as error:
-        line = re.search(r"\(at line (\d+), column \d+\)$", str(error))
-        message = f"file must be TOML, got a fault in its syntax, {error}: mend it"
-        raise FileError(path, [Fault("", message, int(line[1]) if line else None)]) from None
+        raise FileError(path, [Fault("", *syntax_fault(text, error))]) from None
     if not data:
         raise FileError(path, [Fault("", "file must set at least one key, got comments alone: write a preset into it")])
     return data
@@ -97,7 +98,7 @@ def _read_watch(table: object, faults: list[tuple[Place, str]]) -> Watch | None:
     if table is None:
         return None
     if not isinstance(table, dict):
-        faults.append((("watch",), f"watch must be a table, got {table!r:.60}: begin it with [watch]"))
+        faults.append((("watch",), f"watch must be a table, got {told(table)}: begin it with [watch]"))
         return None
     good = _take(table, WATCH_CHECKS, "a watch", ("watch",), faults)
     return Watch(**good)
@@ -105,7 +106,7 @@ def _read_watch(table: object, faults: list[tuple[Place, str]]) -> Watch | None:
 
 def _read_filters(tables: object, rate_hz: float | None, faults: list[tuple[Place, str]]) -> list[Filter | None]:
     if not isinstance(tables, list):
-        message = f"filters must be a list of tables, got {tables!r:.60}: begin each filter with [[filters]], in two brackets"
+        message = f"filters must be a list of tables, got {told(tables)}: begin each filter with [[filters]], in two brackets"
         faults.append((("filters",), message))
         return []
     made: list[Filter | None] = []
@@ -113,7 +114,7 @@ def _read_filters(tables: object, rate_hz: float | None, faults: list[tuple[Plac
         if isinstance(table, dict):
             made.append(_read_filter(table, ("filters", number), rate_hz, faults))
         else:
-            message = f"filters must hold tables, got {table!r:.60}: begin each filter with [[filters]]"
+            message = f"filters must hold tables, got {told(table)}: begin each filter with [[filters]]"
             faults.append((("filters", number), message))
     tables = [table if isinstance(table, dict) else {} for table in tables]
     numbers = [number for number, table in enumerate(tables, start=1) if isinstance(table.get("name"), str)]
@@ -132,7 +133,10 @@ def _read_filter(
     found: list[tuple[Place, str]] = []
     kind = table.get("kind")
     kind = kind if kind in tuple(KINDS) else None
-    good = _take(table, _KIND_CHECKS.get(kind, FILTER_CHECKS), f"a {kind or 'filter'}", place, found)
+    checks = _KIND_CHECKS.get(kind, FILTER_CHECKS)
+    if rate_hz is not None:
+        checks = {**checks, "centre_hz": partial(limits.check_centre, rate_hz=rate_hz)}
+    good = _take(table, checks, f"a {kind or 'filter'}", place, found)
     needed = ("kind", "name", "centre_hz", *([KINDS[kind].level_field] if kind else ()))
     found += [((*place, key), f"{key} must be given, got none: add it") for key in needed if key not in table]
     widths = [key for key in table if key in WIDTHS]
@@ -143,38 +147,43 @@ def _read_filter(
     made = None
     if not found:
         made = KINDS[kind](**{key: value for key, value in good.items() if key != "kind"})
-    if rate_hz is not None and "centre_hz" in good:
-        found += _rate_faults(made, good, widths, place, rate_hz)
+    if rate_hz is not None and "centre_hz" in good and len(widths) == 1 and widths[0] in good:
+        found += _width_faults(made, good, widths[0], place, rate_hz)
     if found:
         name = good.get("name")
         faults += [(where, f"filter {name!r}: {message}" if name else message) for where, message in found]
     return made
 
 
-def _rate_faults(
-    made: Filter | None, good: dict[str, object], widths: list[str], place: Place, rate_hz: float
+def _width_faults(
+    made: Filter | None, good: dict[str, object], key: str, place: Place, rate_hz: float
 ) -> list[tuple[Place, str]]:
-    """What is illegal at the rate, also of a filter whose other fields have faults: centre and width suffice."""
-    key = "centre_hz"
+    """A width illegal at the rate, also of a filter whose other fields have faults: centre and width suffice."""
     try:
-        limits.check_centre(key, good[key], rate_hz)
-        if len(widths) == 1 and widths[0] in good:
-            key = widths[0]
-            (made or Notch("stand-in", good["centre_hz"], 0.0, **{key: good[key]})).section(rate_hz)
+        (made or Notch("stand-in", good["centre_hz"], 0.0, **{key: good[key]})).section(rate_hz)
     except ParameterError as error:
         return [((*place, key), str(error))]
     return []
 
 
 def _take(
-    table: dict[str, object], checks: dict[str, Check], owner: str, place: Place, faults: list[tuple[Place, str]]
+    table: dict[str, object],
+    checks: dict[str, Check],
+    owner: str,
+    place: Place,
+    faults: list[tuple[Place, str]],
+    tables: tuple[str, ...] = (),
 ) -> dict[str, object]:
-    """The checked values of a table's legal keys; unknown keys and bad values are added to ``faults``."""
+    """The checked values of a table's legal keys; unknown keys and bad values are added to ``faults``.
+
+    tables : further keys to offer for an unknown one
+    """
     good = {}
+    offered = [key for key in (*checks, *tables) if key not in _UNOFFERED]
     for key, value in table.items():
         try:
             if key not in checks:
-                raise ParameterError(f"{key!r} is not a key of {owner}: {nearest(key, checks)}")
+                raise ParameterError(f"{key!r} is not a key of {owner}: {nearest(key, offered)}")
             good[key] = checks[key](key, value)
         except ParameterError as error:
             faults.append(((*place, key), str(error)))
@@ -196,7 +205,7 @@ def save_preset(preset: Preset, path: str | os.PathLike[str]) -> None:
     """
     text = _fresh_text(preset)
     try:
-        text = _merged_text(read_text(path), preset) or text
+        text = _merged_text(read_text(path, limits.PRESET_BYTES), preset) or text
     except FileError:
         pass  # nothing there to keep, or nothing readable
     try:

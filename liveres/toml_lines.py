@@ -1,5 +1,6 @@
-"""Where a value stands in a TOML text: tomllib tells what a text holds but not on which line.
+"""Where a value stands in a TOML text, and what is wrong with one that is none, in the house's words.
 
+tomllib tells what a text holds but not on which line, and its faults without a remedy.
 A place is a tuple of keys and of list positions counted from 1: ("filters", 2, "centre_hz") is filters[2].centre_hz.
 Thread: any.
 """
@@ -21,6 +22,35 @@ _TOKEN = re.compile(
     """,
     re.DOTALL | re.VERBOSE,
 )
+
+
+_PLAIN = "text goes in quotes, numbers stand without units and with a decimal point"
+_QUOTES = "text must end with the quotes it began with, got none of them"
+_SYNTAX = [
+    # how the parser's message begins; the rule and what was got; the remedy
+    (r"Expected '='", "a key must be followed by = and its value, got no =", "write it like guard = true"),
+    (r"Invalid value", "a value must be text, a number, true, false or a list, got none of them", _PLAIN),
+    (r"Expected newline", "a line must end after its value, got more", _PLAIN),
+    (r"Cannot overwrite|Duplicate", "a key must be given once, got it a second time", "keep one"),
+    (r"Cannot declare", "a table must be begun once, got it a second time", "keep one; each filter begins with [[filters]]"),
+    (r"Expected '\]", "a table must begin with a line like [watch] or [[filters]], got other brackets", "close them"),
+    (r"Illegal character '\\n'|Unterminated|Expected \"'", _QUOTES, "close it"),
+    (r"Unescaped", "a backslash in double quotes must be written twice, got one", "write two, or use single quotes"),
+    (r"Unclosed array", "a list must end with ], got none", "close it"),
+    (r"Invalid statement", "a line must be key = value, a table in brackets or a # comment, got none of them", "mend it"),
+]
+
+
+def syntax_fault(text: str, error: ValueError) -> tuple[str, int | None]:
+    """What makes a text no TOML, and its line, from the error with which tomllib refused it."""
+    said = re.sub(r" \(at [^()]*\)$", "", str(error))
+    place = re.search(r"\(at line (\d+), column \d+\)$", str(error))
+    unknown = f"file must be TOML, got a fault in its syntax ({said})", "write each line as key = value"
+    rule, remedy = next(((rule, remedy) for begin, rule, remedy in _SYNTAX if re.match(begin, said)), unknown)
+    if place is not None:
+        return f"{rule}: {remedy}", int(place[1])
+    # at the very end: its last line, unless something left open far above runs up to there
+    return f"{rule}: {remedy}", None if rule.startswith(_QUOTES) else len(text.splitlines())
 
 
 def value_lines(text: str) -> dict[Place, int]:

@@ -196,6 +196,9 @@ def _draw_distance(axes: Axes, filters: list[Filter], rate_hz: float) -> None:
             axes.plot(at, inside, marker="o", markerfacecolor="none", clip_on=False, label="notch zeros", **style)
             for x, pole, y in zip(at, (1.0 - abs(pole) for _, pole, _ in chosen), inside, strict=True):
                 axes.plot([x, x], [pole, y], color=colour, linewidth=0.7, alpha=0.6)
+        else:
+            # at 0 Hz and half the rate, on the circle: outside this picture and inside the z-plane's
+            axes.plot([], [], marker="o", markerfacecolor="none", label="resonator zeros", **style)
     axes.set_yscale("log")
     axes.set_ylim(max([*distances, 1e-2]) * 3.0, edge)
     axes.spines["top"].set(color="#909090", linewidth=1.4)
@@ -210,3 +213,4 @@ def _draw_distance(axes: Axes, filters: list[Filter], rate_hz: float) -> None:
 
     second = axes.secondary_yaxis("right", functions=(other, other))
     second.set_ylabel("decay of a pole there, s")
+    second.yaxis.set_major_formatter(FuncFormatter(lambda seconds, _: f"{seconds:g}"))

@@ -12,9 +12,9 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from liveres.commands.compiling import announce_compiling
-from liveres.engine.moves import load_moves
+from liveres.engine.moves import check_moves
 from liveres.errors import ParameterError
-from liveres.files import atomic_target
+from liveres.files import atomic_target, make_folder
 from liveres.hosts.plans import plan_renders
 from liveres.presets import load_preset
 
@@ -31,7 +31,7 @@ def run(args: argparse.Namespace) -> int:
     """
     preset = load_preset(args.preset)
     if args.moves is not None:
-        load_moves(args.moves, preset, preset.rate_hz)
+        check_moves(args.moves, preset)
     if args.out_dir is not None:
         return _render_into_folder(args)
     if len(args.paths) != 2:
@@ -70,8 +70,10 @@ def _check_report(args: argparse.Namespace, paths: Iterable[str | Path]) -> None
 
 
 def _render_into_folder(args: argparse.Namespace) -> int:
+    if os.path.exists(args.out_dir) and not os.path.isdir(args.out_dir):
+        raise ParameterError(f"-o must be a folder, got the file {args.out_dir}: choose another name")
     plans = plan_renders(args.paths, args.out_dir)
-    os.makedirs(args.out_dir, exist_ok=True)
+    make_folder(args.out_dir)
     _check_report(args, [path for plan in plans for path in (plan.in_path, plan.out_path)])
     announce_compiling()
     from liveres.hosts.many import render_many

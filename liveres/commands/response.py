@@ -7,6 +7,7 @@ import cmath
 import csv
 import io
 import json
+import logging
 import math
 from pathlib import Path
 
@@ -53,9 +54,14 @@ def run(args: argparse.Namespace) -> int:
     if args.sos is not None:
         _write_sos(args.sos, shown, preset.rate_hz)
     if args.plot is not None:
+        # without a home it can write to, it would talk of the temporary folder it makes do with
+        logging.getLogger("matplotlib").setLevel(logging.ERROR)
         from liveres.commands.picture import draw
 
-        draw(preset, groups[0][1], groups[0][0], bus_gain, args.plot)
+        label, channel = groups[0]
+        if len(groups) > 1:
+            label += " (the others differ: --channel N draws one)"
+        draw(preset, channel, label, bus_gain, args.plot)
     if args.json:
         print(json.dumps(for_json(result)))
     else:

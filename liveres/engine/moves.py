@@ -5,7 +5,8 @@
 
 The header names the columns, in any order: ``time_s`` or ``frame``, ``filter``, ``field``, ``value`` and, if wanted,
 ``ramp_s``. Blank lines and lines that begin with # count for nothing (a name that begins with # and stands first goes
-in quotes). Rows may stand in any order; those of one frame act in file order.
+in quotes). Rows may stand in any order; those of one frame act in file order, and neighbours among them that move
+different fields of one filter over the same ramp act together, as one retune.
 Thread: control.
 """
 
@@ -85,18 +86,62 @@ def load_moves(path: str | os.PathLike[str], preset: Preset, rate_hz: float) -> 
     frame = round(time_s rate_hz), reckoned exactly however large the time; half a frame goes to the even one.
     Every move must leave its filter legal at the rate, given the moves before it.
 
-    path : the file; UTF-8
+    path : the file; UTF-8, at most 64 MB
     preset : the preset the moves play upon
     rate_hz : float [Hz], closed [8000, 192000]; the rate it is played at, which pole_radius moves refer to
-    Raises : FileError - no such file, a folder, unreadable, empty or not UTF-8; a column missing, unknown or twice;
-        a row with too few or too many cells; a filter not in the preset; a field that filter has not; a value, time
-        or ramp that is no number or outside its range; a filter made illegal at rate_hz
+    Raises : FileError - no such file, a folder or device, unreadable, too large, empty or not UTF-8; a column missing,
+        unknown or twice; a row with too few or too many cells; a filter not in the preset; a field that filter has
+        not; a value, time or ramp that is no number or outside its range; a filter made illegal at rate_hz
         ParameterError - the preset cannot exist at rate_hz
     """
     preset = preset.at_rate(rate_hz)
     faults: list[Fault] = []
+    found = _read_moves(path, preset, rate_hz, faults)
+    faults += _state_faults(found, preset, rate_hz)
+    if faults:
+        raise FileError(path, faults)
+    return tuple(move for _, move in found)
+
+
+def check_moves(path: str | os.PathLike[str], preset: Preset) -> None:
+    """Refuse a moves file for what is wrong with it at every sample rate, while the one it will play at is not known.
+
+    Raises : FileError - as ``load_moves``, but for times out of range and filters made illegal at a rate
+    """
+    faults: list[Fault] = []
+    # the lowest rate has room for the longest times
+    _read_moves(path, preset, limits.RATE_HZ.low, faults)
+    if faults:
+        raise FileError(path, faults)
+
+
+def retunes(moves: Iterable[Move]) -> Iterator[tuple[Move, ...]]:
+    """Moves in order of their frames, those that act together in one tuple.
+
+    These are neighbours of one frame, filter and ramp. The same field again, or a second width, begins a new retune.
+    """
+    together: list[Move] = []
+    for move in sorted(moves, key=lambda move: move.frame):
+        if together and not _acts_with(move, together):
+            yield tuple(together)
+            together = []
+        together.append(move)
+    if together:
+        yield tuple(together)
+
+
+def _acts_with(move: Move, together: list[Move]) -> bool:
+    first = together[0]
+    if (move.frame, move.filter, move.ramp_s) != (first.frame, first.filter, first.ramp_s):
+        return False
+    fields = {one.field for one in together}
+    return move.field not in fields and not (move.field in WIDTHS and fields.intersection(WIDTHS))
+
+
+def _read_moves(path: str | os.PathLike[str], preset: Preset, rate_hz: float, faults: list[Fault]) -> list[tuple[int, Move]]:
+    """Line and move of every row without a fault, in order of frames; every fault is added to ``faults``."""
     found: list[tuple[int, Move]] = []
-    rows = _rows(read_text(path), faults)
+    rows = _rows(read_text(path, limits.MOVES_BYTES), faults)
     columns = _check_header(next(rows, None), faults)
     if columns:
         filters = {one.name: one for one in preset.filters}
@@ -105,11 +150,7 @@ def load_moves(path: str | os.PathLike[str], preset: Preset, rate_hz: float) -> 
             if move:
                 found.append((line, move))
     found.sort(key=lambda entry: entry[1].frame)
-    if columns:
-        faults += _state_faults(found, preset, rate_hz)
-    if faults:
-        raise FileError(path, faults)
-    return tuple(move for _, move in found)
+    return found
 
 
 def _rows(text: str, faults: list[Fault]) -> Iterator[tuple[int, list[str]]]:
@@ -140,17 +181,25 @@ def _check_header(row: tuple[int, list[str]] | None, faults: list[Fault]) -> tup
         faults.append(Fault("", f"{rule}, got none: write it first"))
         return ()
     line, cells = row
+    for mark, marks in ((";", "semicolons"), ("\t", "tabs")):
+        if len(cells) == 1 and mark in cells[0]:
+            faults.append(Fault("", f"cells must be parted by commas, got {marks}: export it with commas", line))
+            return ()
     columns = tuple(cell.strip() for cell in cells)
     found = []
+    there = set(columns)
     for column in dict.fromkeys(columns):
         if column not in COLUMNS:
-            found.append(f"{rule}, got {column!r}: {nearest(column, COLUMNS)}")
+            remedy = nearest(column, COLUMNS)
+            found.append(f"{rule}, got {column!r}: {remedy}")
+            # one that is only misspelt is not missing too
+            there |= {known for known in COLUMNS if remedy == f"did you mean {known}?"}
         elif columns.count(column) > 1:
             found.append(f"{rule}, got {column} twice: keep one")
-    clocks = [column for column in ("time_s", "frame") if column in columns]
+    clocks = [column for column in ("time_s", "frame") if column in there]
     if len(clocks) != 1:
         found.append(f"{rule}, got {'both time_s and frame: keep one' if clocks else 'neither time_s nor frame: add one'}")
-    missing = [column for column in ("filter", "field", "value") if column not in columns]
+    missing = [column for column in ("filter", "field", "value") if column not in there]
     if missing:
         found.append(f"{rule}, got no {' and no '.join(missing)}: add what is missing")
     faults += [Fault("", message, line) for message in found]
@@ -219,21 +268,33 @@ def _read_frame(name: str, cell: str, rate_hz: float) -> int:
     if name == "frame":
         return limits.check_whole(name, number, limits.MOVE_FRAME)
     top_s = limits.MOVE_FRAME.high / rate_hz
-    limits.Bound(0, top_s, "s", "choose a time in the sound, counted from its start").check(name, number)
+    if not 0 <= number <= top_s:
+        rule = f"at most {top_s:.0f} s (2^53 frames)" if number > top_s else "0 s or more"
+        raise ParameterError(f"{name} must be {rule}, got {number:.12g}: choose a time in the sound, counted from its start")
     return round(Fraction(cell.strip()) * Fraction(rate_hz)) if number else 0
 
 
 def _state_faults(found: list[tuple[int, Move]], preset: Preset, rate_hz: float) -> Iterator[Fault]:
     """A fault for every move that makes its filter illegal at the rate; later ones start from the last legal state."""
     filters = {one.name: one for one in preset.filters}
-    for line, move in found:
+    lines = iter([line for line, _ in found])
+
+    def carry_out(together: tuple[Move, ...]) -> None:
+        changed = filters[together[0].filter].changed(**{move.field: move.value for move in together})
+        changed.section(rate_hz)
+        filters[changed.name] = changed
+
+    for together in retunes(move for _, move in found):
+        its_lines = list(itertools.islice(lines, len(together)))
         try:
-            changed = filters[move.filter].changed(**{move.field: move.value})
-            changed.section(rate_hz)
-        except ParameterError as error:
-            yield Fault(move.field, f"filter {move.filter!r}: {error}", line)
-        else:
-            filters[move.filter] = changed
+            carry_out(together)
+        except ParameterError:
+            # taken one by one at least one of them fails, and that is the one to mend
+            for line, move in zip(its_lines, together, strict=True):
+                try:
+                    carry_out((move,))
+                except ParameterError as error:
+                    yield Fault(move.field, f"filter {move.filter!r}: {error}", line)
 
 
 # --- writing ----------------------------------------------------------------------------------

@@ -13,7 +13,7 @@ from functools import partial
 
 from liveres import limits
 from liveres.engine.watch import Watch
-from liveres.errors import ParameterError, nearest
+from liveres.errors import ParameterError, nearest, told
 from liveres.theory import poles
 from liveres.units import gain_from_db
 
@@ -23,8 +23,6 @@ WIDTHS_BY_CENTRE = ("bandwidth_oct", "q")
 NORMALISATIONS = ("peak", "strike")
 ORIGINS = ("preset", "user", "watch")
 
-_RADIUS = limits.Bound(limits.RADIUS_MIN, 1.0, "", "it must stay below 1, where a pole rings for ever")
-
 
 @dataclass(frozen=True)
 class _Filter:
@@ -33,7 +31,7 @@ class _Filter:
     name : str, not empty, unique in its preset
     centre_hz : float [Hz], closed [10, 0.49 rate_hz]; where the gain is extreme, exactly
     exactly one width, each also readable from the others at a rate:
-        pole_radius : float, above 0 and below 1; tied to the preset's rate_hz
+        pole_radius : float, 0.001 or more and below 1; tied to the preset's rate_hz
         bandwidth_hz : float [Hz]; between the -3 dB points of the band-pass part
         bandwidth_oct : float [octaves]
         q : float, 0.5 or more; centre over bandwidth
@@ -205,23 +203,23 @@ class Preset:
         check_filters(self.filters, self.rate_hz)
 
     def at_rate(self, rate_hz: float) -> Preset:
-        """The same preset for another sample rate: centres and decays kept, so raw pole radii become decays.
+        """The same preset for another sample rate: centres and decays kept, so a pole radius R becomes R^(old/new).
 
         Raises : ParameterError - rate outside its range; a filter that cannot exist at that rate
         """
         if rate_hz == self.rate_hz:
             return self
         limits.RATE_HZ.check("rate_hz", rate_hz)
-        moved = tuple(one if one.pole_radius is None else _by_decay(one, self.rate_hz) for one in self.filters)
+        moved = tuple(one if one.pole_radius is None else _moved_radius(one, self.rate_hz, rate_hz) for one in self.filters)
         return dataclasses.replace(self, filters=moved, rate_hz=rate_hz)
 
 
-def _by_decay(one: Filter, rate_hz: float) -> Filter:
-    """The same filter with its pole radius at this rate given as a decay."""
-    # a radius is rounded near one, so the longest permitted may read as a hair over 60 s
-    decay_s = min(poles.decay_from_radius(one.pole_radius, rate_hz), limits.DECAY_S.high)
+def _moved_radius(one: Filter, old_hz: float, new_hz: float) -> Filter:
+    """The same filter with its pole radius at the old rate given as the one of the same decay at the new rate."""
+    # a radius is rounded near one, so the longest permitted may come out a hair too long
+    radius = min(one.pole_radius ** (old_hz / new_hz), poles.radius_max(new_hz))
     try:
-        return one.changed(decay_s=decay_s)
+        return one.changed(pole_radius=radius)
     except ParameterError as error:
         raise ParameterError(f"filter {one.name!r}: {error}") from None
 
@@ -240,7 +238,9 @@ def check_channels(channels: object) -> tuple[int, ...] | None:
     if channels is None:
         return None
     if isinstance(channels, (str, bytes)) or not isinstance(channels, Iterable):
-        raise ParameterError(f"channels must be a list of channel numbers counted from 0, got {channels!r}: write it like [0, 1]")
+        raise ParameterError(
+            f"channels must be a list of channel numbers counted from 0, got {told(channels)}: write it like [0, 1]"
+        )
     numbers = [limits.check_whole("channels", one, limits.CHANNEL_INDEX) for one in channels]
     if not numbers or len(set(numbers)) != len(numbers):
         raise ParameterError(
@@ -274,6 +274,18 @@ def check_filters(filters: Iterable[Filter], rate_hz: float) -> None:
             raise ParameterError(f"filter {one.name!r}: {error}") from None
 
 
+def check_playable(preset: Preset) -> None:
+    """ParameterError for a legal preset that no engine of this release can play, at whatever rate and on whatever channels."""
+    if preset.watch is not None:
+        raise ParameterError(f"watch must be None, since this release cannot listen for howl, got {preset.watch}: take it out")
+    through_db = preset.input_db + preset.dry_db
+    if preset.trim and gain_from_db(preset.input_db) * gain_from_db(preset.dry_db) >= gain_from_db(preset.ceiling_db):
+        raise ParameterError(
+            f"trim must have room under the ceiling: input_db {preset.input_db:g} plus dry_db {preset.dry_db:g} "
+            f"must be below ceiling_db {preset.ceiling_db:g}, got {through_db:g}: lower dry_db"
+        )
+
+
 def repeated_names(names: Iterable[object]) -> Iterator[tuple[int, str]]:
     """Place, counted from 0, and message of every name that stood earlier too."""
     seen = set()
@@ -295,13 +307,13 @@ def excess_kinds(kinds: Iterable[str]) -> Iterator[tuple[int, str]]:
 
 def _check_name(name: str, value: object) -> str:
     if not isinstance(value, str) or not value.strip():
-        raise ParameterError(f"{name} must be a word that is not empty, got {value!r}: give the filter a name")
+        raise ParameterError(f"{name} must be a word that is not empty, got {told(value)}: give the filter a name")
     return value
 
 
 def _check_text(name: str, value: object) -> str:
     if not isinstance(value, str):
-        raise ParameterError(f"{name} must be text, got {value!r}: put it in quotes")
+        raise ParameterError(f"{name} must be text, got {told(value)}: put it in quotes")
     return value
 
 
@@ -312,15 +324,18 @@ def _check_watch(name: str, value: object) -> Watch | None:
 
 
 def _check_radius(name: str, value: object) -> float:
-    radius = _RADIUS.check(name, value)
-    if not radius < 1.0:
-        raise ParameterError(f"{name} must be below 1, where a pole rings for ever, got {radius:.12g}: lower it or give decay_s")
-    return radius
+    radius = limits.check_number(name, value)
+    if limits.RADIUS_MIN <= radius < 1.0:
+        return radius
+    remedy = "raise it" if radius < limits.RADIUS_MIN else "lower it or give decay_s"
+    raise ParameterError(
+        f"{name} must be {limits.RADIUS_MIN:g} or more and below 1, where a pole rings for ever, got {radius:.12g}: {remedy}"
+    )
 
 
 def _check_choice(choices: tuple[str, ...], name: str, value: object) -> str:
     if value not in choices:
-        raise ParameterError(f"{name} must be one of {', '.join(choices)}, got {value!r}: {nearest(str(value), choices)}")
+        raise ParameterError(f"{name} must be one of {', '.join(choices)}, got {told(value)}: {nearest(str(value), choices)}")
     return value
 
 

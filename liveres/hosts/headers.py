@@ -23,6 +23,9 @@ _UNKNOWN = 0xFFFFFFFF
 def is_sound(path: str) -> bool:
     """True when the file begins like one of CONTAINERS."""
     try:
+        # a pipe would make the reader wait for ever
+        if not os.path.isfile(path):
+            return False
         with open(path, "rb") as file:
             return file.read(4) in _MARKS
     except OSError:
@@ -32,10 +35,12 @@ def is_sound(path: str) -> bool:
 def container_of(path: str) -> str:
     """The container a file begins like.
 
-    Raises : AudioFileError - missing, a folder, not readable, empty, or none of CONTAINERS
+    Raises : AudioFileError - missing, a folder, a device or pipe, not readable, empty, or none of CONTAINERS
     """
     if os.path.isdir(path):
         raise AudioFileError(f"{path}: it must be a sound file, got a folder: name a file in it")
+    if os.path.exists(path) and not os.path.isfile(path):
+        raise AudioFileError(f"{path}: it must be a sound file, got a device or pipe: save the sound to a file first")
     try:
         with open(path, "rb") as file:
             mark = file.read(4)

@@ -1,24 +1,31 @@
 """Rendering many files at once, one on each processor core, so that one failure harms no other.
 
-Workers are fresh processes. They take their orders to stop from the parent alone, and stop between two pieces of
-sound, by an exception, so that no half file is left; a worker whose parent has died stops by itself.
+Workers are fresh processes, each in a pool of its own: one that is killed, as happens when memory runs out, takes no
+other's file with it. Its file is rendered once more, in a fresh process and after the others. Workers take their orders
+to stop from the parent alone, and stop between two pieces of sound, by an exception, so that no half file is left; a
+worker whose parent has died stops by itself.
 Thread: control, the main thread of a program.
 """
 
 from __future__ import annotations
 
 import contextlib
+import ctypes
 import multiprocessing
 import os
 import signal
 import threading
 import time
+from collections import deque
 from collections.abc import Callable, Iterable, Iterator
-from concurrent.futures import Future, ProcessPoolExecutor, as_completed
+from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
+from concurrent.futures.process import BrokenProcessPool
 from dataclasses import dataclass
 from multiprocessing.synchronize import Event
+from pathlib import Path
 
 from liveres.errors import LiveresError
+from liveres.files import make_folder, temporary_prefix
 from liveres.hosts.offline import render
 from liveres.hosts.plans import Plan
 
@@ -48,21 +55,68 @@ def render_many(
     workers : processes at once; as many as there are cores when left out
     Raises : whatever interrupts the wait, once every worker has stopped
     """
-    plans = list(plans)
+    todo = deque(plans)
+    killed: set[Plan] = set()
+    # plans whose worker was killed; each gets one more
     context = multiprocessing.get_context("spawn")
     stop = context.Event()
-    workers = max(1, min(workers or core_count(), len(plans)))
-    pool = ProcessPoolExecutor(workers, mp_context=context, initializer=_begin_worker, initargs=(stop,))
+    free = [_Worker(context, stop) for _ in range(max(1, min(workers or core_count(), len(todo))))]
+    busy: dict[Future, tuple[_Worker, Plan]] = {}
     try:
-        with _interrupts_held_back():
-            futures = {pool.submit(_render_one, plan, settings): plan for plan in plans}
-        for future in as_completed(futures):
-            on_outcome(_outcome(futures[future], future))
+        while todo or busy:
+            while todo and free:
+                worker, plan = free.pop(), todo.popleft()
+                busy[worker.begin(plan, settings)] = worker, plan
+            ended, _ = wait(busy, return_when=FIRST_COMPLETED)
+            for future in ended:
+                worker, plan = busy.pop(future)
+                free.append(worker)
+                if isinstance(future.exception(), BrokenProcessPool):
+                    worker.replace(plan)
+                    if plan not in killed:
+                        killed.add(plan)
+                        todo.append(plan)
+                        continue
+                on_outcome(_outcome(plan, future))
     except BaseException:
         stop.set()
         raise
     finally:
-        pool.shutdown(wait=True, cancel_futures=True)
+        for worker in (*free, *(worker for worker, _ in busy.values())):
+            worker.close()
+
+
+class _Worker:
+    """One process that renders one file after another."""
+
+    def __init__(self, context: multiprocessing.context.SpawnContext, stop: Event):
+        self._context, self._stop = context, stop
+        self._process = context.Value(ctypes.c_int64, 0, lock=False)
+        self._open()
+
+    def _open(self) -> None:
+        orders = (self._stop, self._process)
+        self._pool = ProcessPoolExecutor(1, mp_context=self._context, initializer=_begin_worker, initargs=orders)
+
+    def begin(self, plan: Plan, settings: dict[str, object]) -> Future:
+        """Have a plan rendered."""
+        with _interrupts_held_back():
+            return self._pool.submit(_render_one, plan, settings)
+
+    def replace(self, plan: Plan) -> None:
+        """Make room for a new process after the one at work on ``plan`` was killed, and clear away what it began."""
+        self._pool.shutdown()
+        if self._process.value:
+            folder = Path(os.path.realpath(plan.out_path)).parent
+            for begun in folder.glob(f"{temporary_prefix(self._process.value)}*"):
+                with contextlib.suppress(OSError):
+                    begun.unlink()
+        self._process.value = 0
+        self._open()
+
+    def close(self) -> None:
+        """Wait for the process to end."""
+        self._pool.shutdown(wait=True, cancel_futures=True)
 
 
 def core_count() -> int:
@@ -74,8 +128,14 @@ def _outcome(plan: Plan, future: Future) -> Outcome:
     error = future.exception()
     if error is None:
         return Outcome(plan, future.result(), None)
-    if isinstance(error, (LiveresError, OSError)):
+    if isinstance(error, LiveresError):
         return Outcome(plan, None, str(error))
+    if isinstance(error, OSError) and error.strerror:
+        return Outcome(plan, None, f"{error.filename or plan.in_path}: the system refused: {error.strerror}")
+    if isinstance(error, BrokenProcessPool):
+        return Outcome(
+            plan, None, f"{plan.in_path}: the process that rendered it was killed, twice: free some memory, or render it alone"
+        )
     return Outcome(plan, None, f"{plan.in_path}: the process that rendered it failed ({type(error).__name__}: {error})")
 
 
@@ -99,9 +159,10 @@ _alone = threading.Event()
 # set when this worker is told to stop itself, or its parent has died
 
 
-def _begin_worker(stop: Event) -> None:
+def _begin_worker(stop: Event, process: ctypes.c_int64) -> None:
     global _stop
     _stop = stop
+    process.value = os.getpid()
     for name in ("SIGTERM", "SIGHUP"):
         if hasattr(signal, name):
             signal.signal(getattr(signal, name), lambda number, frame: _alone.set())
@@ -121,5 +182,5 @@ def _render_one(plan: Plan, settings: dict[str, object]) -> dict:
             raise Stopped(f"{plan.in_path}: told to stop, nothing was written")
 
     listen(0, 0)
-    plan.out_path.parent.mkdir(parents=True, exist_ok=True)
+    make_folder(plan.out_path.parent)
     return render(plan.in_path, plan.out_path, progress=listen, **settings)

@@ -20,7 +20,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from liveres import limits
-from liveres.engine.moves import Move, load_moves
+from liveres.engine.moves import Move, load_moves, retunes
 from liveres.engine.processor import Processor
 from liveres.engine.settings import Preset
 from liveres.errors import AudioFileError
@@ -56,7 +56,7 @@ def render(
     in_path : WAV, RF64, W64, CAF, AIFF or FLAC of 16-, 24-, 32-bit integers, floats or doubles; 1 to 32 channels
     out_path : its ending chooses the container; rate, channels and sample type stay. It is complete or not there
     preset : Preset, or the path of a preset file; moved to the file's rate
-    moves : Moves in any order, or the path of a moves file; each acts on its exact frame
+    moves : Moves in any order, or the path of a moves file; each acts on its exact frame, those of one retune together
     block_frames : int, closed [1, 65536]; the result does not depend on it
     tail_s : float [s], closed [0, 600]; how long to go on after the input has ended
     progress : called as the render goes on; an error it raises ends the render, and nothing is written
@@ -80,8 +80,7 @@ def render(
         tail_frames = round(tail_s * source.rate_hz)
         container, remark = plan_container(source, out_path, source.frames + tail_frames)
         processor = Processor(settings, rate_hz=source.rate_hz, channels=source.channels)
-        todo = deque(sorted(moves or (), key=lambda move: move.frame))
-        run = _Run(source, processor, todo, block_frames, tail_frames)
+        run = _Run(source, processor, deque(retunes(moves or ())), block_frames, tail_frames)
         with atomic_target(out_path) as temporary:
             sink = Sink(
                 temporary, str(out_path), container, source.subtype, source.rate_hz, source.channels,
@@ -125,7 +124,7 @@ class _Run:
 
     source: Source
     processor: Processor
-    moves: deque[Move]
+    retunes: deque[tuple[Move, ...]]
     block_frames: int
     tail_frames: int
     frames_in: int = 0
@@ -142,6 +141,8 @@ class _Run:
             writing: Future[None] | None = None
             for piece in self._input(skip):
                 heard = np.concatenate(list(self._processed(piece)))[skip:]
+                # the engine keeps but the newest events until they are read
+                self.processor.events()
                 skip -= min(skip, len(piece))
                 if writing is not None:
                     writing.result()
@@ -171,13 +172,14 @@ class _Run:
         """The piece in blocks, cut at every move so that each acts on its exact frame."""
         start = 0
         while start < len(piece):
-            while self.moves and self.moves[0].frame <= self.position:
-                move = self.moves.popleft()
-                self.processor.retune(move.filter, ramp_s=move.ramp_s, **{move.field: move.value})
-                self.moves_made += 1
+            while self.retunes and self.retunes[0][0].frame <= self.position:
+                together = self.retunes.popleft()
+                changes = {move.field: move.value for move in together}
+                self.processor.retune(together[0].filter, ramp_s=together[0].ramp_s, **changes)
+                self.moves_made += len(together)
             end = min(start + self.block_frames, len(piece))
-            if self.moves:
-                end = min(end, start + self.moves[0].frame - self.position)
+            if self.retunes:
+                end = min(end, start + self.retunes[0][0].frame - self.position)
             yield self.processor.process(piece[start:end])
             self.position += end - start
             start = end
@@ -197,7 +199,7 @@ class _Run:
             "cut_short": cut_short,
             "latency_frames": self.processor.latency_frames,
             "moves_made": self.moves_made,
-            "moves_left": len(self.moves),
+            "moves_left": self._moves_left(),
             "meters": self.processor.meters(),
             "true_peak_db": db_from_gain(self.true_peak.finish()),
             "events": self.processor.events(),
@@ -207,6 +209,9 @@ class _Run:
             "times_real_time": sink.frames / source.rate_hz / seconds,
             "notes": list(self._notes(sink, cut_short)),
         }
+
+    def _moves_left(self) -> int:
+        return sum(map(len, self.retunes))
 
     def _notes(self, sink: Sink, cut_short: bool) -> Iterator[str]:
         if cut_short:
@@ -222,5 +227,5 @@ class _Run:
                 f"the output ends while it still rings at {ringing_db:.0f} dBFS; "
                 f"--tail {math.ceil(self.tail_frames / self.source.rate_hz + self.processor.longest_decay_s)} lets it ring out"
             )
-        if self.moves:
-            yield f"moves after the end, not made: {len(self.moves)}; a longer tail makes room for them"
+        if self.retunes:
+            yield f"moves after the end, not made: {self._moves_left()}; a longer tail makes room for them"

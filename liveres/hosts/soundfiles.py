@@ -35,6 +35,9 @@ SMALL_FILE_BYTES = (1 << 32) - (1 << 16)
 _PROBE_BYTES = 1 << 20
 _SET_ADD_PEAK_CHUNK = 0x1050
 # libsndfile's command of that name: the chunk carries the time of day, and the same render must give the same file
+_FRAMES_UNKNOWN = (1 << 63) - 1
+# as libsndfile says that the header does not tell: FLAC as stream encoders write it
+_COUNTED_FRAMES = 1 << 16
 
 
 class Source:
@@ -43,6 +46,9 @@ class Source:
     path : file to read
     Raises : AudioFileError - missing, a folder, empty, not a sound file of a container above, a header cut short,
         samples of another encoding, no frames at all, channels or rate outside the limits
+
+    frames : how many there are; counted by reading them where the header does not tell
+    promised : how many the header promises; ``frames`` where it does not
     """
 
     def __init__(self, path: str | Path):
@@ -75,6 +81,9 @@ class Source:
             limits.CHANNELS.check("channels", self.channels)
         except ParameterError as error:
             raise AudioFileError(f"{self.path}: {error}") from None
+        self._counts = self.frames == _FRAMES_UNKNOWN
+        if self._counts:
+            self.frames = self._count()
         self.promised = promised_frames(self.path, kind, self.channels * _BYTES[self.subtype]) or self.frames
         if self.frames == 0:
             raise AudioFileError(f"{self.path}: it must hold at least one frame, got 0: record or export it again")
@@ -83,11 +92,23 @@ class Source:
         """All of the sound, in arrays (frames, channels) of ``dtype``; the last may be shorter.
 
         A file that breaks off is given up to its last frame that can be read; compare what came with ``promised``.
+        Raises : AudioFileError - not a single frame can be read
         """
+        some = False
+        for piece in self._readable(frames):
+            some = True
+            yield piece
+        if not some:
+            raise AudioFileError(
+                f"{self.path}: its header promises {self.promised} frames and none can be read: "
+                "the file is damaged or cut short, copy or record it again"
+            )
+
+    def _readable(self, frames: int) -> Iterator[np.ndarray]:
         done = 0
         while True:
             try:
-                piece = self._file.read(frames, dtype=self.dtype.name, always_2d=True)
+                piece = self._read(self._file, frames)
             except soundfile.LibsndfileError:
                 yield from self._last_frames(done, frames)
                 return
@@ -95,6 +116,19 @@ class Source:
                 return
             done += len(piece)
             yield piece
+
+    def _read(self, file: soundfile.SoundFile, frames: int) -> np.ndarray:
+        if not self._counts:
+            return file.read(frames, dtype=self.dtype.name, always_2d=True)
+        # soundfile seeks after every piece, which fails at an end that the header does not tell: read by the library itself
+        piece = np.empty((frames, self.channels), self.dtype)
+        kind = "double" if self.dtype == np.float64 else "float"
+        read = getattr(soundfile._snd, f"sf_readf_{kind}")
+        return piece[: read(file._file, soundfile._ffi.cast(f"{kind}*", piece.ctypes.data), frames)]
+
+    def _count(self) -> int:
+        with soundfile.SoundFile(self.path) as file:
+            return sum(iter(lambda: len(self._read(file, _COUNTED_FRAMES)), 0))
 
     def _last_frames(self, done: int, frames: int) -> Iterator[np.ndarray]:
         """What can still be read before the break: ever smaller pieces, each from a fresh start."""

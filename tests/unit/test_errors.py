@@ -1,8 +1,10 @@
 """The error tree, the wording of faults in files, and the remedy for a name nobody knows."""
 
+import datetime
+
 import pytest
 
-from liveres.errors import AudioFileError, DeviceError, Fault, FileError, LiveresError, ParameterError, nearest
+from liveres.errors import AudioFileError, DeviceError, Fault, FileError, LiveresError, ParameterError, nearest, told
 
 # --- tree -------------------------------------------------------------------------------------
 
@@ -88,3 +90,29 @@ KNOWN = ["centre_hz", "depth_db", "q"]
 def test_an_unknown_name_is_met_with_the_nearest_or_with_all_there_are(word, known, remedy):
     """A typing slip is the usual fault; a wild guess needs the whole list."""
     assert nearest(word, known) == remedy
+
+
+# --- values -----------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    "value, text",
+    [
+        (True, "true"),
+        (False, "false"),
+        ({"q": 3}, "a table"),
+        ({}, "a table"),
+        ([{"q": 3}], "a list of tables"),
+        ([1, 2], "[1, 2]"),
+        (datetime.date(2024, 1, 1), "2024-01-01"),
+        (datetime.time(12, 30), "12:30:00"),
+        ("5", "'5'"),
+        (None, "None"),
+        (1.5, "1.5"),
+        ("x" * 58, f"'{'x' * 58}'"),
+        ("x" * 59, f"'{'x' * 56}..."),
+    ],
+)
+def test_a_value_is_told_as_a_file_would_have_it(value, text):
+    """Who wrote true or [filters] has not written True or {...}; and a message is a line, not a page."""
+    assert told(value) == text

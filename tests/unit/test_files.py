@@ -12,9 +12,10 @@ from pathlib import Path
 import pytest
 
 from liveres.errors import AudioFileError, FileError, LiveresError
-from liveres.files import WriteError, atomic_target, number_text, read_text
+from liveres.files import WriteError, atomic_target, make_folder, number_text, read_text
 
 OLD = b"old and whole\n"
+MOST = 100
 
 
 def run_child(code: str, folder: Path) -> str:
@@ -57,7 +58,7 @@ def test_a_byte_order_mark_is_dropped_and_line_ends_stay(tmp_path):
     """Some editors and spreadsheets write a mark that no parser of ours should meet."""
     path = tmp_path / "a.csv"
     path.write_bytes(b"\xef\xbb\xbfframe\r\n\xc3\xa9")
-    assert read_text(path) == "frame\r\né"
+    assert read_text(path, MOST) == "frame\r\né"
 
 
 @pytest.mark.parametrize(
@@ -74,28 +75,48 @@ def test_a_file_that_is_no_text_is_refused_with_its_reason(tmp_path, content, me
     path = tmp_path / "a"
     path.write_bytes(content)
     with pytest.raises(FileError) as caught:
-        read_text(path)
+        read_text(path, MOST)
     assert [(fault.key, fault.message, fault.line) for fault in caught.value.faults] == [("", message, line)]
 
 
 def test_a_missing_file_and_a_folder_are_told_apart(tmp_path, target):
     """The remedy differs: look for the name, or name a file in the folder."""
     with pytest.raises(FileError) as caught:
-        read_text(tmp_path / "none.toml")
+        read_text(tmp_path / "none.toml", MOST)
     assert str(caught.value) == f"{tmp_path}/none.toml: file must exist, got none: check the name and the folder"
     with pytest.raises(FileError) as caught:
-        read_text(target / "none.toml")
+        read_text(target / "none.toml", MOST)
     assert str(caught.value) == f"{target}/none.toml: file must exist, got none: check the name and the folder"
     with pytest.raises(FileError) as caught:
-        read_text(tmp_path)
-    assert str(caught.value) == f"{tmp_path}: file must be a file, got a folder: name a file inside it"
+        read_text(tmp_path, MOST)
+    assert str(caught.value) == f"{tmp_path}: it must be a file, got a folder: name a file inside it"
+
+
+def test_a_file_is_read_up_to_its_bound_and_a_larger_one_refused(tmp_path):
+    """The last byte that is permitted and the first that is not."""
+    path = tmp_path / "a"
+    path.write_bytes(b"a" * 2**20)
+    assert len(read_text(path, 2**20)) == 2**20
+    path.write_bytes(b"a" * (2**20 + 1))
+    with pytest.raises(FileError) as caught:
+        read_text(path, 2**20)
+    assert str(caught.value) == f"{path}: file must be at most 1 MB, got a larger one: choose the right file"
+
+
+def test_a_device_or_pipe_is_refused_unread(tmp_path):
+    """/dev/zero never ends, and a pipe without a writer never begins."""
+    os.mkfifo(tmp_path / "pipe")
+    for path in ("/dev/zero", "/dev/null", tmp_path / "pipe"):
+        with pytest.raises(FileError) as caught:
+            read_text(path, MOST)
+        assert str(caught.value) == f"{path}: it must be an ordinary file, got a device or pipe: save the text in a file first"
 
 
 def test_an_unreadable_file_is_refused_by_name(open_folder):
     """A preset in another user's folder is a common fault on shared machines."""
     (open_folder / "secret.toml").write_bytes(OLD)
     os.chmod(open_folder / "secret.toml", 0)
-    code = DROP_RIGHTS + "try: read_text('secret.toml')\nexcept FileError as error: print(error)"
+    code = DROP_RIGHTS + "try: read_text('secret.toml', 99)\nexcept FileError as error: print(error)"
     told = run_child(code, open_folder)
     assert told == "secret.toml: file must be readable, and permission was refused: change its permissions"
 
@@ -258,6 +279,65 @@ def test_a_target_that_cannot_be_a_file_is_refused(tmp_path, target):
         assert str(caught.value) == f"{path}: {message}"
     assert sorted(tmp_path.iterdir()) == [pipe.parent, target]
     assert alone(pipe)
+
+
+@pytest.mark.skipif(not os.path.isdir("/proc/self"), reason="needs a folder that only shows what the system knows")
+def test_a_folder_that_takes_no_files_is_not_called_missing(tmp_path):
+    """The system says "no such file" of a folder that is plainly there."""
+    with pytest.raises(WriteError) as caught, atomic_target("/proc/x.wav"):
+        pytest.fail("the block must not run")
+    assert str(caught.value) == "/proc/x.wav: folder /proc must take new files, and takes none: choose another place"
+
+
+@pytest.fixture
+def read_only_disk(tmp_path):
+    """A disk with one file that nobody may write to, where this account may mount one."""
+    place = tmp_path / "disk"
+    place.mkdir()
+    if subprocess.run(["mount", "-t", "tmpfs", "tmpfs", str(place)], capture_output=True).returncode != 0:
+        pytest.skip("mounting a disk needs root")
+    (place / "old.wav").write_bytes(OLD)
+    subprocess.run(["mount", "-o", "remount,ro", str(place)], check=True)
+    yield place
+    subprocess.run(["umount", str(place)], check=True)
+
+
+def test_a_read_only_disk_is_named_as_such(read_only_disk):
+    """No permission would help there, neither for an old file nor for a new one or a folder."""
+    for name in ("old.wav", "new.wav"):
+        with pytest.raises(WriteError) as caught, atomic_target(read_only_disk / name):
+            pytest.fail("the block must not run")
+        assert str(caught.value) == f"{read_only_disk / name}: the disk is read-only: choose another place"
+    with pytest.raises(WriteError) as caught:
+        make_folder(read_only_disk / "a" / "b")
+    assert str(caught.value) == f"{read_only_disk}/a/b: the disk is read-only: choose another place"
+    assert (read_only_disk / "old.wav").read_bytes() == OLD
+
+
+def test_a_folder_is_made_with_those_above_it_and_one_that_is_there_is_left(tmp_path):
+    """The plain use."""
+    make_folder(tmp_path / "a" / "b")
+    (tmp_path / "a" / "b" / "kept").write_bytes(OLD)
+    make_folder(tmp_path / "a" / "b")
+    assert (tmp_path / "a" / "b" / "kept").read_bytes() == OLD
+
+
+def test_a_folder_is_not_made_where_a_file_stands(target):
+    """In its place or above it."""
+    for path in (target, target / "takes"):
+        with pytest.raises(WriteError) as caught:
+            make_folder(path)
+        assert str(caught.value) == f"{path}: it must be a folder, and a file is in its way: choose another name"
+    assert alone(target) and target.read_bytes() == OLD
+
+
+def test_a_folder_is_refused_in_the_name_of_the_one_above(open_folder):
+    """That is the one whose permissions are to be changed."""
+    os.chmod(open_folder, 0o555)
+    told = run_child(DROP_RIGHTS + "try: make_folder('a/b')\nexcept WriteError as error: print(error)", open_folder)
+    os.chmod(open_folder, 0o755)
+    remedy = "change its permissions or choose another place"
+    assert told == f"a/b: folder {os.path.realpath(open_folder)} must permit writing, and refused: {remedy}"
 
 
 @pytest.mark.parametrize("number", [0.0, -0.0, 48000.0, 0.1, 1e-320, 1e15, 1e22, 1.7e308, 2**53 - 1.0, float("-inf"), 1 / 3])

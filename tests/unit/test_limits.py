@@ -7,7 +7,7 @@ import numpy as np
 import pytest
 
 from liveres import limits
-from liveres.errors import ParameterError
+from liveres.errors import ParameterError, told
 
 BOUNDS = {name: bound for name, bound in vars(limits).items() if isinstance(bound, limits.Bound)}
 
@@ -25,6 +25,8 @@ TABLE = [
     ("GAIN_DB", -120, 24, 24.5, "x must be from -120 to 24 dB, got 24.5: choose a gain in the range"),
     ("DRY_DB", -120, 24, -121, "x must be from -120 to 24 dB or -inf, got -121: use -inf to leave the dry sound out"),
     ("DEPTH_DB", -120, 0, 0.1, "x must be from -120 to 0 dB or -inf, got 0.1: a notch only cuts: use 0 or less, -inf for a null"),
+    ("WATCH_NOTCHES", 1, 128, 0, "x must be from 1 to 128, got 0: 8 to 24 is usual"),
+    ("WATCH_DEEPEST_DB", -60, -3, 0, "x must be from -60 to -3 dB, got 0: -12 to -24 is usual"),
     ("RAMP_S", 0, 600, -1, "x must be from 0 to 600 s, got -1: 0 jumps at once; use several moves for longer journeys"),
     ("MOVE_FRAME", 0, 2**53, -1, f"x must be from 0 to {2**53:.12g} frames, got -1: choose a frame of the sound, counted from 0"),
     ("TAIL_S", 0, 600, 601, "x must be from 0 to 600 s, got 601: 60 s outlasts everything a preset can ring"),
@@ -78,7 +80,8 @@ NO_NUMBERS = [True, np.True_, np.False_, "1", b"1", np.str_("1"), None, [1], (1,
 @pytest.mark.parametrize("name", ["RATE_HZ", "DEPTH_DB", "LOOKAHEAD_S"])
 def test_what_is_no_number_is_refused_with_the_number_rule(name, value):
     """true is not 1 and "1" is not 1: a preset that says so says something else than it means."""
-    assert refusal(BOUNDS[name].check, "x", value) == f"x must be a number, got {value!r}: write it without quotes"
+    remedy = "write it without quotes" if isinstance(value, str) else "write a number"
+    assert refusal(BOUNDS[name].check, "x", value) == f"x must be a number, got {told(value)}: {remedy}"
 
 
 @pytest.mark.parametrize("value", [3, 3.0, np.float32(3), np.float64(3), np.int16(3), Fraction(3)], ids=repr)
@@ -114,7 +117,7 @@ def test_whole_numbers_come_back_as_int(value):
         (0, "channels must be from 1 to 32, got 0: use fewer channels, or several runs"),
         (math.nan, "channels must be from 1 to 32, got nan: use fewer channels, or several runs"),
         (math.inf, "channels must be from 1 to 32, got inf: use fewer channels, or several runs"),
-        (True, "channels must be a number, got True: write it without quotes"),
+        (True, "channels must be a number, got true: write a number"),
         ("2", "channels must be a number, got '2': write it without quotes"),
     ],
 )
@@ -128,7 +131,8 @@ def test_a_flag_is_true_or_false_and_nothing_that_merely_counts_as_it():
     assert limits.check_flag("guard", True) is True
     assert limits.check_flag("guard", False) is False
     for value in (0, 1, 0.0, "true", "", None, [], np.True_):
-        assert refusal(limits.check_flag, "guard", value) == f"guard must be true or false, got {value!r}: write true or false"
+        message = f"guard must be true or false, got {told(value)}: write true or false"
+        assert refusal(limits.check_flag, "guard", value) == message
 
 
 # --- the centre -------------------------------------------------------------------------------
@@ -149,9 +153,9 @@ def test_a_centre_reaches_from_ten_hertz_to_forty_nine_hundredths_of_the_rate(ra
         (5, "centre_hz must be from 10 to 23520 Hz (0.49 of rate_hz 48000), got 5: raise it"),
         (-440, "centre_hz must be from 10 to 23520 Hz (0.49 of rate_hz 48000), got -440: raise it"),
         (24_000, "centre_hz must be from 10 to 23520 Hz (0.49 of rate_hz 48000), got 24000: lower it or raise the sample rate"),
-        (math.nan, "centre_hz must be from 10 to 23520 Hz (0.49 of rate_hz 48000), got nan: lower it or raise the sample rate"),
+        (math.nan, "centre_hz must be from 10 to 23520 Hz (0.49 of rate_hz 48000), got nan: write a number"),
         (math.inf, "centre_hz must be from 10 to 23520 Hz (0.49 of rate_hz 48000), got inf: lower it or raise the sample rate"),
-        (True, "centre_hz must be a number, got True: write it without quotes"),
+        (True, "centre_hz must be a number, got true: write a number"),
         ("440", "centre_hz must be a number, got '440': write it without quotes"),
     ],
 )

@@ -1,9 +1,11 @@
 """Rendering many files: where each goes, that one failure harms no other, that a stop leaves nothing half done."""
 
+import contextlib
 import os
 import signal
 import subprocess
 import sys
+import threading
 import time
 
 import numpy as np
@@ -186,6 +188,57 @@ def test_workers_end_when_their_parent_is_killed(tmp_path):
     wait_for(lambda: not group_lives(process.pid), 30.0)
     assert all(not name.startswith(".") for name in os.listdir(tmp_path / "out"))
     process.communicate()
+
+
+@pytest.mark.skipif(sys.platform != "linux", reason="kills processes by number, as Linux does when memory runs out")
+def test_a_worker_that_is_killed_costs_nothing(tmp_path):
+    """As when memory runs out: its file is rendered by another, and nothing half done lies about."""
+    (tmp_path / "in").mkdir()
+    for seed in range(3):
+        write(tmp_path / "in" / f"{seed}.wav", np.tile(noise(48_000, seed=seed), (20, 1)))
+    save_preset(SLOW, tmp_path / "slow.toml")
+    process = start([tmp_path / "in", "-o", tmp_path / "out", "--preset", tmp_path / "slow.toml"])
+    wait_for(lambda: growing(tmp_path / "out") or process.poll() is not None)
+    (begun, *_) = [name for name in os.listdir(tmp_path / "out") if name.startswith(".")]
+    os.kill(int(begun[1:].split("-")[0]), signal.SIGKILL)
+    _, errors = process.communicate(timeout=300)
+    assert process.returncode == 0, errors
+    assert sorted(os.listdir(tmp_path / "out")) == ["0.wav", "1.wav", "2.wav"]
+    assert all(soundfile.info(tmp_path / "out" / f"{seed}.wav").frames == 20 * 48_000 for seed in range(3))
+
+
+@pytest.mark.skipif(sys.platform != "linux", reason="kills processes by number, as Linux does when memory runs out")
+def test_only_the_file_that_kills_its_worker_twice_is_reported(tmp_path):
+    """One take too large for the memory must not cost the others."""
+    (tmp_path / "in").mkdir()
+    for seed in range(3):
+        write(tmp_path / "in" / f"{seed}.wav", np.tile(noise(48_000, seed=seed), (60 if seed == 0 else 1, 1)))
+    outcomes, shot = [], []
+    over = threading.Event()
+
+    def shoot():
+        while not over.wait(0.002):
+            for name in os.listdir(tmp_path / "out") if (tmp_path / "out").exists() else []:
+                # only the long file grows so large
+                path = tmp_path / "out" / name
+                with contextlib.suppress(OSError):
+                    if name.startswith(".") and path.stat().st_size > 1_000_000:
+                        number = int(name[1:].split("-")[0])
+                        os.kill(number, signal.SIGKILL)
+                        shot.append(number)
+
+    hunter = threading.Thread(target=shoot)
+    hunter.start()
+    try:
+        many.render_many(plans.plan_renders([tmp_path / "in"], tmp_path / "out"), {"preset": SLOW}, outcomes.append, 2)
+    finally:
+        over.set()
+        hunter.join()
+    assert [one.error for one in outcomes if one.error] == [
+        f"{tmp_path / 'in' / '0.wav'}: the process that rendered it was killed, twice: free some memory, or render it alone"
+    ]
+    assert len(set(shot)) == 2
+    assert sorted(os.listdir(tmp_path / "out")) == ["1.wav", "2.wav"]
 
 
 def group_lives(group):

@@ -108,6 +108,19 @@ def test_a_moves_file_and_its_moves_give_the_same_bits(tmp_path):
     assert plain["preset"] is None and plain["preset_sha256"] is None
 
 
+def test_moves_of_one_retune_act_together(tmp_path):
+    """A live session's step of two fields, replayed from its file, is the same step: its first half alone is not legal."""
+    given = write(tmp_path / "in.wav", noise(), "DOUBLE")
+    preset = Preset([Notch("wide", 4000.0, -20.0, bandwidth_hz=3000.0)])
+    save_moves([Move(5000, "wide", "centre_hz", 100.0), Move(5000, "wide", "bandwidth_hz", 5.0)], tmp_path / "m.csv")
+    report = liveres.render(given, tmp_path / "out.wav", preset, tmp_path / "m.csv")
+    assert (report["moves_made"], report["moves_left"]) == (2, 0)
+    x, processor = raw(given, "DOUBLE"), Processor(preset, RATE_HZ, 2)
+    before = processor.process(x[:5000])
+    processor.retune("wide", centre_hz=100.0, bandwidth_hz=5.0)
+    assert np.array_equal(raw(tmp_path / "out.wav", "DOUBLE"), np.concatenate([before, processor.process(x[5000:])]))
+
+
 def test_moves_after_the_end_are_counted_and_told(tmp_path):
     """A moves file for a longer take must not pass as played in full."""
     given = write(tmp_path / "in.wav", noise())
@@ -245,6 +258,24 @@ def test_the_report_tells_levels_limiter_guard_and_faults(tmp_path):
     assert meters["guard_most_db"] < -11.0
     assert meters["traps"] == {"input": 1, "state": 0}
     assert "guard" in {event["kind"] for event in report["events"]}
+
+
+class Poisoned(Processor):
+    """An engine whose filters are corrupted before every block."""
+
+    def process(self, x):
+        """The block, after the fault."""
+        self.memory.ringing[:] = np.nan
+        return super().process(x)
+
+
+def test_no_event_of_a_long_render_is_dropped(tmp_path, monkeypatch):
+    """The engine's own list of events holds 1024; a night's recording may have more."""
+    monkeypatch.setattr("liveres.hosts.offline.Processor", Poisoned)
+    given = write(tmp_path / "in.wav", noise(70 * 1024, 16))
+    report = liveres.render(given, tmp_path / "out.wav", HALL, block_frames=1024)
+    heard = [(event["frame"], event["channel"]) for event in report["events"]]
+    assert heard == [(1024 * number, channel) for number in range(70) for channel in range(16)]
 
 
 def test_true_peak_of_the_report_is_that_of_the_samples_written(tmp_path):

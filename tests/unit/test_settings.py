@@ -60,6 +60,7 @@ def test_a_filter_does_not_change_once_made(make):
         make().centre_hz = 2000.0
 
 
+_RADIUS = "pole_radius must be 0.001 or more and below 1, where a pole rings for ever"
 FAULTS = [
     ({"name": ""}, "name must be a word that is not empty, got '': give the filter a name"),
     ({"name": "  "}, "name must be a word that is not empty, got '  ': give the filter a name"),
@@ -71,10 +72,11 @@ FAULTS = [
     ({"decay_s": 61}, "decay_s must be from 0.001 to 60 s, got 61: choose a shorter or longer decay"),
     ({"bandwidth_hz": 0}, "bandwidth_hz must be from 0.001 to 96000 Hz, got 0: choose a width in the range"),
     ({"bandwidth_oct": 3}, "bandwidth_oct must be from 0.0005 to 2.5 octaves, got 3: 0.1 is a usual notch"),
-    ({"pole_radius": 1.5}, "pole_radius must be from 0.001 to 1, got 1.5: it must stay below 1, where a pole rings for ever"),
-    ({"pole_radius": 0}, "pole_radius must be from 0.001 to 1, got 0: it must stay below 1, where a pole rings for ever"),
-    ({"pole_radius": 1}, "pole_radius must be below 1, where a pole rings for ever, got 1: lower it or give decay_s"),
-    ({"pole_radius": True}, "pole_radius must be a number, got True: write it without quotes"),
+    ({"pole_radius": 1.5}, f"{_RADIUS}, got 1.5: lower it or give decay_s"),
+    ({"pole_radius": 0}, f"{_RADIUS}, got 0: raise it"),
+    ({"pole_radius": 1}, f"{_RADIUS}, got 1: lower it or give decay_s"),
+    ({"pole_radius": math.nan}, f"{_RADIUS}, got nan: lower it or give decay_s"),
+    ({"pole_radius": True}, "pole_radius must be a number, got true: write a number"),
     ({"enabled": 1}, "enabled must be true or false, got 1: write true or false"),
     ({"origin": "me"}, "origin must be one of preset, user, watch, got 'me': use one of preset, user, watch"),
     ({"origin": "users"}, "origin must be one of preset, user, watch, got 'users': did you mean user?"),
@@ -85,7 +87,7 @@ FAULTS = [
     ({"channels": [32]}, "channels must be from 0 to 31, got 32: channels are counted from 0"),
     ({"channels": [-1]}, "channels must be from 0 to 31, got -1: channels are counted from 0"),
     ({"channels": [0.5]}, "channels must be a whole number, got 0.5: round it"),
-    ({"channels": [True]}, "channels must be a number, got True: write it without quotes"),
+    ({"channels": [True]}, "channels must be a number, got true: write a number"),
 ]
 
 
@@ -272,7 +274,7 @@ def test_another_rate_keeps_centres_and_decays():
     one = Preset([notch(pole_radius=radius, depth_db=-12), resonator(q=20.0), resonator(name="d", decay_s=3.0)], title="t")
     moved = one.at_rate(96_000)
     assert moved.rate_hz == 96_000
-    assert moved.filters[0].width == ("decay_s", pytest.approx(0.25, rel=1e-9))
+    assert moved.filters[0].width == ("pole_radius", pytest.approx(math.exp(-math.log(1000.0) / (96_000 * 0.25)), rel=1e-12))
     assert (moved.filters[0].centre_hz, moved.filters[0].depth_db) == (1000.0, -12.0)
     assert moved.filters[1:] == one.filters[1:]
     assert moved.title == "t"
@@ -284,7 +286,7 @@ def test_the_longest_legal_radius_survives_a_change_of_rate(rate_hz):
     """It rings 60 s, give or take a rounding, and 60 s is legal everywhere."""
     radius = math.exp(-math.log(1000.0) / (rate_hz * 60.0))
     moved = Preset([notch(pole_radius=radius)], rate_hz=rate_hz).at_rate(44_101)
-    assert moved.filters[0].decay_s == pytest.approx(60.0, rel=1e-9)
+    assert moved.filters[0].pole_radius == pytest.approx(math.exp(-math.log(1000.0) / (44_101 * 60.0)), rel=1e-12)
 
 
 def test_another_rate_says_which_filter_it_cannot_hold():
@@ -299,7 +301,16 @@ def test_another_rate_says_which_filter_it_cannot_hold():
     )
 
 
-def test_a_radius_too_short_for_any_other_rate_is_refused_with_its_filters_name():
-    """0.5 at 48 kHz rings 0.2 ms, which is under the shortest decay that can be written."""
-    message = refusal(Preset([notch(name="wide", centre_hz=5000, pole_radius=0.5)]).at_rate, 44_100)
-    assert message == "filter 'wide': decay_s must be from 0.001 to 60 s, got 0.00020762050593: choose a shorter or longer decay"
+@pytest.mark.parametrize("radius", [0.8, 0.5])
+def test_a_radius_shorter_than_any_decay_that_can_be_written_moves_all_the_same(radius):
+    """0.8 at 48 kHz rings 0.64 ms, which is under the shortest decay; a file at 44.1 kHz must still play."""
+    moved = Preset([notch(name="wide", centre_hz=5000, pole_radius=radius)]).at_rate(44_100)
+    (one,) = moved.filters
+    assert one.width[0] == "pole_radius"
+    assert math.log(one.pole_radius) * 44_100 == pytest.approx(math.log(radius) * 48_000, rel=1e-12)
+
+
+def test_a_radius_that_another_rate_would_make_too_small_is_refused_with_its_filters_name():
+    """0.006 at 48 kHz rings for one frame; at a third of that rate not even for one."""
+    message = refusal(Preset([notch(name="wide", centre_hz=12_000, pole_radius=0.006)]).at_rate, 16_000)
+    assert message.startswith("filter 'wide': pole_radius must be ") and "got 2.16e-07" in message
