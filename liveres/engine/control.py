@@ -18,7 +18,7 @@ import numpy as np
 from liveres import limits
 from liveres.engine import reports
 from liveres.engine.memory import Memory
-from liveres.engine.settings import KINDS, WIDTHS, WIDTHS_BY_CENTRE, Filter, Notch, Preset, Resonator
+from liveres.engine.settings import KINDS, WIDTHS, WIDTHS_BY_CENTRE, Filter, Notch, Preset, Resonator, check_playable
 from liveres.errors import ParameterError, nearest
 from liveres.kernels import block
 from liveres.kernels import state as s
@@ -61,9 +61,7 @@ class Control:
             raise ParameterError(f"preset must be a Preset, got {preset!r}: load one with load_preset")
         self.rate_hz = limits.RATE_HZ.check("rate_hz", rate_hz)
         self.channels = limits.check_whole("channels", channels, limits.CHANNELS)
-        if preset.watch is not None:
-            message = f"watch must be None, since this release cannot listen for howl, got {preset.watch}: take it out"
-            raise ParameterError(message)
+        check_playable(preset)
         self.preset = preset.at_rate(self.rate_hz)
         self.memory = Memory(self.preset, self.rate_hz, self.channels)
         self._arrays = self.memory.arrays
@@ -260,12 +258,6 @@ class Control:
             return 1.0
         through, dry = gain_from_db(self.preset.input_db), gain_from_db(self.preset.dry_db)
         ceiling = gain_from_db(self.preset.ceiling_db)
-        if through * dry >= ceiling:
-            raise ParameterError(
-                f"trim must have room under the ceiling: input_db {self.preset.input_db:g} plus dry_db {self.preset.dry_db:g} "
-                f"must be below ceiling_db {self.preset.ceiling_db:g}, "
-                f"got {self.preset.input_db + self.preset.dry_db:g}: lower dry_db"
-            )
         return trim_gain(self.filters, self.rate_hz, self.channels, through, dry, ceiling)
 
     def _find(self, name: str) -> Filter:

@@ -55,17 +55,17 @@ def render_many(
     workers : processes at once; as many as there are cores when left out
     Raises : whatever interrupts the wait, once every worker has stopped
     """
-    todo = deque(plans)
+    waiting = deque(plans)
     killed: set[Plan] = set()
     # plans whose worker was killed; each gets one more
     context = multiprocessing.get_context("spawn")
     stop = context.Event()
-    free = [_Worker(context, stop) for _ in range(max(1, min(workers or core_count(), len(todo))))]
+    free = [_Worker(context, stop) for _ in range(max(1, min(workers or core_count(), len(waiting))))]
     busy: dict[Future, tuple[_Worker, Plan]] = {}
     try:
-        while todo or busy:
-            while todo and free:
-                worker, plan = free.pop(), todo.popleft()
+        while waiting or busy:
+            while waiting and free:
+                worker, plan = free.pop(), waiting.popleft()
                 busy[worker.begin(plan, settings)] = worker, plan
             ended, _ = wait(busy, return_when=FIRST_COMPLETED)
             for future in ended:
@@ -75,7 +75,7 @@ def render_many(
                     worker.replace(plan)
                     if plan not in killed:
                         killed.add(plan)
-                        todo.append(plan)
+                        waiting.append(plan)
                         continue
                 on_outcome(_outcome(plan, future))
     except BaseException:
